@@ -61,50 +61,55 @@ EXAMPLES = {
 }
 
 
-def parse(value: Any, kind: str, *, where: str = "value", bare: str | None = None) -> float:
+def convert(value: Any, kind: str) -> float:
     """Turn ``"0.1 km/s"`` into a float in the internal unit of `kind`.
 
     Parameters
     ----------
     value : str, int, float or astropy.units.Quantity
-        A number with a unit. A bare number is taken only when `bare` names its unit, or the kind is
-        dimensionless.
+        A number with a unit; a bare number only where the kind is dimensionless.
     kind : str
         One of `KINDS`.
-    where : str
-        The key in the job file, for the message.
-    bare : str, optional
-        Unit of a bare number.
 
     Raises
     ------
-    JobError
-        Not a number, no unit, an unknown unit, a unit of another kind, or not finite.
+    ValueError
+        Not a number, no unit, an unknown unit, a unit of another kind, or not finite; the message says what
+        was found and what would do.
     """
-    wanted = KINDS[kind]
+    name = "plain number" if kind == "dimensionless" else kind
+    wanted = f"a {name} is wanted, such as {EXAMPLES[kind]}"
     try:
         if isinstance(value, bool):
             raise TypeError
         quantity = u.Quantity(value)
     except (TypeError, ValueError):
-        raise JobError(
-            f"{where}: {value!r} is not a number with a unit; wanted a {kind}, such as {EXAMPLES[kind]}"
-        ) from None
+        raise ValueError(f"{value!r} is not a number with a unit; {wanted}") from None
     if quantity.ndim:
-        raise JobError(f"{where}: {value!r} is a list; wanted one {kind}, such as {EXAMPLES[kind]}")
+        raise ValueError(f"{value!r} is a list where {wanted}")
     if quantity.unit == u.dimensionless_unscaled and kind != "dimensionless":
-        if bare is None:
-            raise JobError(f"{where}: {value!r} has no unit; wanted a {kind}, such as {EXAMPLES[kind]}")
-        quantity = quantity.value * u.Unit(bare)
+        raise ValueError(f"{value!r} has no unit; {wanted}")
     try:
-        result = float(quantity.to_value(wanted))
+        result = float(quantity.to_value(KINDS[kind]))
     except u.UnitConversionError:
-        raise JobError(
-            f"{where}: {value!r} is in {quantity.unit} where a {kind} is wanted, such as {EXAMPLES[kind]}"
-        ) from None
+        raise ValueError(f"{value!r} is in {quantity.unit} where {wanted}") from None
     if not math.isfinite(result):
-        raise JobError(f"{where}: {value!r} is not finite")
+        raise ValueError(f"{value!r} is not finite; {wanted}")
     return result
+
+
+def parse(value: Any, kind: str, *, where: str) -> float:
+    """`convert` for a value that a user wrote at `where`.
+
+    Raises
+    ------
+    JobError
+        As `convert`, naming the place.
+    """
+    try:
+        return convert(value, kind)
+    except ValueError as error:
+        raise JobError(f"{where}: {error}") from None
 
 
 def show(value: float, kind: str, unit: str, digits: int = 4) -> str:

@@ -1,0 +1,269 @@
+"""Where a ray is: its interval in each patch, the finest patch at every depth, the cells it crosses.
+
+Everything is in finest units (see `cubeforge.mesh.hierarchy`); depth `t` runs along the ray in any unit of
+length. One formula gives the depth of every face on every level, ``t = index * step + shift`` with ``step =
+scale / d`` and ``shift = -o / d``: two patches that share a face agree on its depth to the last bit,
+and the cells met don't depend on how the same data are cut into patches, or on where a march was resumed.
+No contraction to fused multiply-adds is allowed here, since it would break that agreement.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from numba import njit
+
+_opts = {"nogil": True, "cache": True, "error_model": "numpy"}
+Array = Any
+
+
+@njit(**_opts)
+def axis_interval(o: float, d: float, inverse: float, lo: int, hi: int, scale: int) -> tuple[float, float]:
+    """Depths at which a ray enters and leaves the slab ``lo <= index < hi`` of one axis."""
+    if d == 0.0:
+        # Half open, so that a ray in the plane between two patches belongs to one of them.
+        inside = o >= lo * scale and o < hi * scale
+        return (-math.inf, math.inf) if inside else (math.inf, -math.inf)
+    step = scale * inverse
+    shift = -o * inverse
+    t0 = lo * step + shift
+    t1 = hi * step + shift
+    return (t0, t1) if d > 0.0 else (t1, t0)
+
+
+@njit(**_opts)
+def patch_interval(origin: Array, direction: Array, inverse: Array, lo: Array, hi: Array, scale: Array,
+                   t_lo: float, t_hi: float) -> tuple[float, float]:  # fmt: skip
+    """Depths between which a ray, itself limited to ``t_lo..t_hi``, is inside one patch (empty: t0 >= t1)."""
+    for axis in range(3):
+        a, b = axis_interval(origin[axis], direction[axis], inverse[axis], lo[axis], hi[axis], scale[axis])
+        t_lo = max(t_lo, a)
+        t_hi = min(t_hi, b)
+    return t_lo, t_hi
+
+
+@njit(**_opts)
+def sort_by_start(start: Array, stop: Array, patch: Array, first: int, last: int) -> None:
+    """Insertion sort of ``first..last`` by start: the lists are short and nearly sorted already."""
+    for i in range(first + 1, last):
+        a, b, p = start[i], stop[i], patch[i]
+        j = i - 1
+        while j >= first and start[j] > a:
+            start[j + 1], stop[j + 1], patch[j + 1] = start[j], stop[j], patch[j]
+            j -= 1
+        start[j + 1], stop[j + 1], patch[j + 1] = a, b, p
+
+
+@njit(**_opts)
+def fill_gaps(start: Array, stop: Array, patch: Array, n: int, new_start: Array, new_stop: Array,
+              new_patch: Array, m: int, out_start: Array, out_stop: Array, out_patch: Array) -> int:  # fmt: skip
+    """Lay the `m` coarser intervals under the `n` finer ones; both sorted, the result too. Returns its length."""
+    k = 0
+    i = 0
+    for j in range(m):
+        t = new_start[j]
+        end = new_stop[j]
+        while i < n and stop[i] <= t:
+            out_start[k], out_stop[k], out_patch[k] = start[i], stop[i], patch[i]
+            k += 1
+            i += 1
+        while i < n and start[i] < end:
+            if start[i] > t:
+                out_start[k], out_stop[k], out_patch[k] = t, start[i], new_patch[j]
+                k += 1
+            t = max(t, stop[i])
+            if stop[i] > end:
+                break
+            out_start[k], out_stop[k], out_patch[k] = start[i], stop[i], patch[i]
+            k += 1
+            i += 1
+        if t < end:
+            out_start[k], out_stop[k], out_patch[k] = t, end, new_patch[j]
+            k += 1
+    while i < n:
+        out_start[k], out_stop[k], out_patch[k] = start[i], stop[i], patch[i]
+        k += 1
+        i += 1
+    return k
+
+
+@njit(**_opts)
+def overlay(origin: Array, direction: Array, inverse: Array, t_lo: float, t_hi: float, lo: Array, hi: Array,
+            level: Array, scale: Array, candidates: Array, n_candidates: int, start: Array, stop: Array,
+            patch: Array) -> int:  # fmt: skip
+    """Cut a ray into pieces of one patch each, the finest patch winning everywhere.
+
+    Parameters
+    ----------
+    lo, hi : int64, shape (patches, 3)
+        Corners of the patches in their own level's index space.
+    level : int32, shape (patches,)
+    scale : int64, shape (levels, 3)
+        Finest units per cell.
+    candidates : int32
+        Patches to try, ascending in level.
+    start, stop, patch : shape (3, capacity), out
+        Scratch and result; row 0 of each holds the pieces in order of depth. ``capacity >= 2 * candidates + 1``.
+
+    Returns
+    -------
+    int
+        Number of pieces.
+    """
+    n = 0
+    row = 0
+    c = n_candidates
+    while c > 0:
+        this_level = level[candidates[c - 1]]
+        m = 0
+        while c > 0 and level[candidates[c - 1]] == this_level:
+            c -= 1
+            p = candidates[c]
+            a, b = patch_interval(origin, direction, inverse, lo[p], hi[p], scale[this_level], t_lo, t_hi)
+            if a < b:
+                start[2, m], stop[2, m], patch[2, m] = a, b, p
+                m += 1
+        if m == 0:
+            continue
+        sort_by_start(start[2], stop[2], patch[2], 0, m)
+        other = 1 - row
+        n = fill_gaps(start[row], stop[row], patch[row], n, start[2], stop[2], patch[2], m,
+                      start[other], stop[other], patch[other])  # fmt: skip
+        row = other
+    if row == 1:
+        for i in range(n):
+            start[0, i], stop[0, i], patch[0, i] = start[1, i], stop[1, i], patch[1, i]
+    return n
+
+
+@njit(**_opts)
+def start_index(t: float, o: float, d: float, step: float, shift: float, lo: int, hi: int, scale: int) -> int:
+    """Cell of one axis that holds depth `t`: entered at or before it, left after it."""
+    i = int(math.floor((o + d * t) / scale)) if d != 0.0 else int(math.floor(o / scale))
+    i = min(max(i, lo), hi - 1)
+    if d > 0.0:
+        while i + 1 < hi and (i + 1) * step + shift <= t:
+            i += 1
+        while i > lo and i * step + shift > t:
+            i -= 1
+    elif d < 0.0:
+        while i > lo and i * step + shift <= t:
+            i -= 1
+        while i + 1 < hi and (i + 1) * step + shift > t:
+            i += 1
+    return i
+
+
+@njit(**_opts)
+def trace(origin: Array, direction: Array, inverse: Array, t0: float, t1: float, lo: Array, hi: Array,
+          scale: Array, cells: Array, lengths: Array) -> int:  # fmt: skip
+    """Cells of one patch that a ray crosses between depths `t0` and `t1` (after Amanatides & Woo 1987).
+
+    Parameters
+    ----------
+    lo, hi, scale : int64, shape (3,)
+        The patch's corners in its level's index space; finest units per cell.
+    cells : int64, out
+        Flat index of each cell crossed, in the patch's C order (x, y, z).
+    lengths : float64, out
+        Length of each crossing, in the unit of `t`. Both want ``sum(hi - lo) + 1`` places.
+
+    Returns
+    -------
+    int
+        Number of crossings; all have a positive length.
+    """
+    sx, sy, sz = scale[0] * inverse[0], scale[1] * inverse[1], scale[2] * inverse[2]
+    bx, by, bz = -origin[0] * inverse[0], -origin[1] * inverse[1], -origin[2] * inverse[2]
+    ix = start_index(t0, origin[0], direction[0], sx, bx, lo[0], hi[0], scale[0])
+    iy = start_index(t0, origin[1], direction[1], sy, by, lo[1], hi[1], scale[1])
+    iz = start_index(t0, origin[2], direction[2], sz, bz, lo[2], hi[2], scale[2])
+    dx, dy, dz = direction[0], direction[1], direction[2]
+    stride_x = (hi[1] - lo[1]) * (hi[2] - lo[2])
+    stride_y = hi[2] - lo[2]
+    tx = (ix + (dx > 0.0)) * sx + bx if dx != 0.0 else math.inf
+    ty = (iy + (dy > 0.0)) * sy + by if dy != 0.0 else math.inf
+    tz = (iz + (dz > 0.0)) * sz + bz if dz != 0.0 else math.inf
+    t = t0
+    n = 0
+    while True:
+        face = min(tx, min(ty, tz))
+        end = min(face, t1)
+        if end > t:
+            cells[n] = (ix - lo[0]) * stride_x + (iy - lo[1]) * stride_y + (iz - lo[2])
+            lengths[n] = end - t
+            n += 1
+            t = end
+        if face >= t1:
+            return n
+        if tx == face:
+            ix += 1 if dx > 0.0 else -1
+            if ix < lo[0] or ix >= hi[0]:
+                return n
+            tx = (ix + (dx > 0.0)) * sx + bx
+        if ty == face:
+            iy += 1 if dy > 0.0 else -1
+            if iy < lo[1] or iy >= hi[1]:
+                return n
+            ty = (iy + (dy > 0.0)) * sy + by
+        if tz == face:
+            iz += 1 if dz > 0.0 else -1
+            if iz < lo[2] or iz >= hi[2]:
+                return n
+            tz = (iz + (dz > 0.0)) * sz + bz
+
+
+@njit(**_opts)
+def clip_to_region(origin: Array, direction: Array, inverse: Array, box: Array, sphere: Array,
+                   cell: Array) -> tuple[float, float]:  # fmt: skip
+    """Depths between which a ray is inside the region that is rendered.
+
+    Parameters
+    ----------
+    box : float64, shape (2, 3)
+        Low and high corner in finest units.
+    sphere : float64, shape (4,)
+        Centre in finest units and radius in units of length; a radius of infinity means no sphere.
+    cell : float64, shape (3,)
+        Size of a finest unit, in units of length, per axis.
+    """
+    t0, t1 = -math.inf, math.inf
+    for axis in range(3):
+        o, d = origin[axis], direction[axis]
+        if d == 0.0:
+            if o < box[0, axis] or o >= box[1, axis]:
+                return math.inf, -math.inf
+            continue
+        a = box[0, axis] * inverse[axis] + -o * inverse[axis]
+        b = box[1, axis] * inverse[axis] + -o * inverse[axis]
+        t0 = max(t0, min(a, b))
+        t1 = min(t1, max(a, b))
+    if sphere[3] < math.inf:
+        along = 0.0
+        square = 0.0
+        speed = 0.0
+        for axis in range(3):
+            x = (origin[axis] - sphere[axis]) * cell[axis]
+            v = direction[axis] * cell[axis]
+            along += x * v
+            square += x * x
+            speed += v * v
+        root = along * along - speed * (square - sphere[3] * sphere[3])
+        if root <= 0.0:
+            return math.inf, -math.inf
+        root = math.sqrt(root)
+        t0 = max(t0, (-along - root) / speed)
+        t1 = min(t1, (-along + root) / speed)
+    return t0, t1
+
+
+@njit(**_opts)
+def inverse_of(direction: Array) -> Array:
+    """One over each component, 0 where the component is 0 (never used there)."""
+    out = np.zeros(3)
+    for axis in range(3):
+        if direction[axis] != 0.0:
+            out[axis] = 1.0 / direction[axis]
+    return out
