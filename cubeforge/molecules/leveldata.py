@@ -230,7 +230,7 @@ def _check_frequencies(
         upper, lower = transitions.upper[row], transitions.lower[row]
         found, expected = transitions.frequency[row] / 1e9, derived[row] * WAVENUMBER / H / 1e9
         raise MoleculeError(
-            f"{path}: the frequency of {int(wrong.sum())} of {len(wrong)} transitions contradicts the energies "
-            f"of its levels by more than {MISMATCH:g}; the first is number {row + 1}, "
-            f"{labels[upper]}-{labels[lower]}: {found:.6f} GHz, and {expected:.6f} GHz from the energies (cm^-1)"
+            f"{path}: the frequency of {int(wrong.sum())} of {len(wrong)} transitions contradicts the "
+            f"energies of its levels by more than {MISMATCH:g}; the first is number {row + 1}, "
+            f"{labels[upper]}-{labels[lower]}: {found:.6f} GHz, but {expected:.6f} GHz from the energies"
         )

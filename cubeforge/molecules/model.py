@@ -218,9 +218,10 @@ class Molecule:
             rows = [row for row, name in enumerate(names) if _plain(name) == wanted]
         if len(rows) != 1:
             raise MoleculeError(self._transition_problem(which, rows, names))
-        return self._line(rows[0])
+        return self.line(rows[0])
 
-    def _line(self, row: int) -> Line:
+    def line(self, row: int) -> Line:
+        """The line of transition `row`, counted from 0 as the arrays are."""
         upper, lower = int(self.transitions.upper[row]), int(self.transitions.lower[row])
         return Line(
             molecule=self.name,
