@@ -6,6 +6,9 @@ import numpy as np
 
 from cubeforge.errors import SnapshotError
 
+SCAN = 1 << 22
+"""Bytes searched for line ends at a time."""
+
 
 class Lines:
     """A cursor over the lines of `raw`; every complaint names the file and the line.
@@ -19,58 +22,62 @@ class Lines:
     """
 
     def __init__(self, raw: bytes, name: str) -> None:
-        ends = np.flatnonzero(np.frombuffer(raw, dtype=np.uint8) == ord("\n"))
-        if len(raw) and not raw.endswith(b"\n"):
-            ends = np.append(ends, len(raw))
         self.name = name
         self._raw = raw
-        self._ends = ends
-        self._next = 0
+        self._at = 0
+        self._taken = 0
 
     @property
     def number(self) -> int:
         """Lines taken so far, which is also the number of the last one, counted from 1."""
-        return self._next
+        return self._taken
 
-    def _start(self, line: int) -> int:
-        return int(self._ends[line - 1]) + 1 if line else 0
+    def _end(self) -> int:
+        end = self._raw.find(b"\n", self._at)
+        return len(self._raw) if end < 0 else end
 
     def peek(self) -> str | None:
         """The next line without its ends, or None after the last."""
-        if self._next >= len(self._ends):
+        if self._at >= len(self._raw):
             return None
-        line = self._raw[self._start(self._next) : int(self._ends[self._next])]
-        return line.decode("utf-8", errors="replace").strip()
+        return self._raw[self._at : self._end()].decode("utf-8", errors="replace").strip()
 
     def take(self, wanted: str) -> str:
         """The next line; `wanted` says what it should be, for the message when the file ends before it."""
         line = self.peek()
         if line is None:
-            raise SnapshotError(f"{self.name}: ends after line {self._next}, where {wanted} was expected")
-        self._next += 1
+            raise SnapshotError(f"{self.name}: ends after line {self._taken}, where {wanted} was expected")
+        self._at = self._end() + 1
+        self._taken += 1
         return line
 
     def block(self, count: int, wanted: str) -> bytes:
         """The next `count` lines as they stand, newlines included."""
-        if self._next + count > len(self._ends):
-            raise SnapshotError(
-                f"{self.name}: ends after line {len(self._ends)}, where {count} lines of {wanted} "
-                f"were expected from line {self._next + 1} on"
-            )
-        begin = self._start(self._next)
-        self._next += count
-        return self._raw[begin : self._start(self._next)]
+        begin, left = self._at, count
+        while left:
+            if self._at >= len(self._raw):
+                raise SnapshotError(
+                    f"{self.name}: ends after line {self._taken + count - left}, where {count} lines of "
+                    f"{wanted} were expected from line {self._taken + 1} on"
+                )
+            size = min(SCAN, len(self._raw) - self._at)
+            piece = np.frombuffer(self._raw, dtype=np.uint8, count=size, offset=self._at)
+            ends = np.flatnonzero(piece == ord("\n"))[:left]
+            left -= len(ends)
+            self._at += size if left else int(ends[-1]) + 1
+        self._taken += count
+        return self._raw[begin : self._at]
 
     def skip_blank(self) -> None:
         """Go past empty lines."""
         while self.peek() == "":
-            self._next += 1
+            self.take("an empty line")
 
     def wrong(self, found: str, wanted: str, line: int | None = None) -> SnapshotError:
         """The error to raise for a line (by default the last taken) that is not what was wanted."""
         shown = found if len(found) <= 80 else found[:77] + "..."
         return SnapshotError(
-            f'{self.name}, line {self._next if line is None else line}: found "{shown}", expected {wanted}'
+            f'{self.name}, line {self._taken if line is None else line}: found "{shown}", expected {wanted}'
         )
 
     def integer(self, wanted: str, least: int = 0) -> int:

@@ -17,8 +17,10 @@ from cubeforge.snapshots.amrex_fab import RealFormat, parse_real_format
 
 FloatArray = npt.NDArray[np.float64]
 
-_BOX_LINE = re.compile(rb"\(\(-?\d+,-?\d+,-?\d+\) \(-?\d+,-?\d+,-?\d+\) \(-?\d+,-?\d+,-?\d+\)\) *\n")
-_PLACE_LINE = re.compile(rb"FabOnDisk: \S+ \d+ *\n")
+# Possessive (++, *+): nothing to go back to, so a match over a million lines keeps no state.
+_CELL = rb"\(-?\d++,-?\d++,-?\d++\)"
+_BOX_LINE = re.compile(rb"\(%s %s %s\) *+\n" % (_CELL, _CELL, _CELL))
+_PLACE_LINE = re.compile(rb"FabOnDisk: \S++ \d++ *+\n")
 _TO_SPACES = bytes.maketrans(b"(),\n", b"    ")
 
 
@@ -161,7 +163,7 @@ def _places(lines: Lines, boxes: int) -> tuple[tuple[str, ...], npt.NDArray[np.i
 
 
 def _check_block(block: bytes, pattern: re.Pattern[bytes], lines: Lines, first: int, wanted: str) -> None:
-    if re.fullmatch(rb"(?:%s)*" % pattern.pattern, block):
+    if re.fullmatch(rb"(?:%s)*+" % pattern.pattern, block):
         return
     for number, line in enumerate(block.splitlines(keepends=True)):
         if not pattern.fullmatch(line):
@@ -177,7 +179,7 @@ def _extremes(lines: Lines, rows: int, components: int, what: str, version: int)
             raise lines.wrong(line, wanted)
     first = lines.number + 1
     block = lines.block(rows, what)
-    row = re.compile(rb"(?:[^,\s]+,){%d}\s*\n" % components)
+    row = re.compile(rb"(?:[^,\s]++,){%d} *+\n" % components)
     _check_block(block, row, lines, first, f"{components} {what}, each with a comma after it")
     try:
         return np.array(block.replace(b",", b" ").split()).astype(np.float64).reshape(rows, components)
