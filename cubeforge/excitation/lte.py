@@ -104,7 +104,7 @@ class LteExcitation:
         return kappa.reshape(np.shape(n_mol)), emis.reshape(np.shape(n_mol))
 
     def at(self, temperature: float) -> tuple[float, float]:
-        """Opacity (cm^3/s) and emission (K cm^3/s) per molecule at one temperature: times n_mol for a cell."""
+        """Opacity (cm^3/s) and emission (K cm^3/s) per molecule at one temperature."""
         kappa, emis = self.coefficients(np.ones(1), np.array([temperature]))
         return float(kappa[0]), float(emis[0])
 
@@ -123,8 +123,8 @@ class LteExcitation:
             missing = self.molecule.missing_fraction(hottest)
             notes.append(
                 f"{name}: its {self.molecule.levels} levels reach E/k = {top:.0f} K; at {hottest:g} K about "
-                f"{100 * missing:.2g} % of the partition function lies above them (wanted: below {100 * HELD:g} "
-                f"%), and LTE populations come out {1 / (1 - missing):.3g} times too high."
+                f"{100 * missing:.2g} % of the partition function lies above them (wanted: below "
+                f"{100 * HELD:g} %), and LTE populations come out {1 / (1 - missing):.4g} times too high."
             )
         return notes
 
