@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import contextlib
 import errno
+import glob
 import logging
 import os
 import shutil
@@ -18,6 +19,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
+from cubeforge.cube.process import alive, machine, started
 from cubeforge.errors import CubeError, EngineError
 from cubeforge.quantities import show_bytes
 
@@ -89,6 +91,30 @@ def write_all(descriptor: int, data: Any, offset: int | None = None) -> None:
             count = os.pwrite(descriptor, view, offset)
             offset += count
         view = view[count:]
+
+
+def beside(path: Path) -> Path:
+    """Hidden name next to `path` that says which process is making it."""
+    pid = os.getpid()
+    return _beside(path, f"{pid}.{started(pid)}.{uuid.uuid4().hex[:8]}")
+
+
+def _beside(path: Path, who: str) -> Path:
+    return path.parent / f".{path.name}.{machine()}.{who}.new"
+
+
+def sweep_beside(path: Path) -> None:
+    """Remove files and folders that dead processes of this machine left `beside` `path`.
+
+    Those of other machines stay: whether their process lives cannot be told from here.
+    """
+    for left in path.parent.glob(_beside(Path(glob.escape(str(path))), "*").name):
+        *_, pid, since, _, _ = left.name.split(".")
+        if pid.isdigit() and not alive(int(pid), since):
+            if left.is_dir():
+                shutil.rmtree(left, ignore_errors=True)
+            else:
+                left.unlink(missing_ok=True)
 
 
 class Staging:

@@ -2,11 +2,9 @@
 
 from __future__ import annotations
 
-import glob
 import json
 import os
 import shutil
-import uuid
 from pathlib import Path
 from typing import Any
 
@@ -14,8 +12,16 @@ import numpy as np
 import zarr
 from zarr.codecs import BloscCodec
 
-from cubeforge.cube.durable import STAGING, Staging, disk_errors, fsync_folder, make_folders
-from cubeforge.cube.process import alive, machine, new_run_id, started
+from cubeforge.cube.durable import (
+    STAGING,
+    Staging,
+    beside,
+    disk_errors,
+    fsync_folder,
+    make_folders,
+    sweep_beside,
+)
+from cubeforge.cube.process import new_run_id
 from cubeforge.cube.spec import RADIAN, CubeSpec
 from cubeforge.cube.tiles import INTENSITY, LEDGER, MAPS, Cube, DurableStore
 from cubeforge.errors import CubeError, CubeforgeError
@@ -46,9 +52,8 @@ def create_cube(path: Path | str, spec: CubeSpec) -> None:
     _refuse_existing(path)
     with disk_errors(path, 0):
         make_folders(path.parent)
-        _sweep_building(path)
-        pid = os.getpid()
-        building = _building(path, f"{pid}.{started(pid)}.{uuid.uuid4().hex[:8]}")
+        sweep_beside(path)
+        building = beside(path)
         try:
             _build(building, spec)
             try:
@@ -76,18 +81,6 @@ def _refuse_existing(path: Path) -> None:
             f"Choose another path, or move it away. ({error})"
         ) from None
     raise CubeError(f"{path}: a cube is there already; resume it, or choose another path")
-
-
-def _building(path: Path, who: str) -> Path:
-    return path.parent / f".{path.name}.{machine()}.{who}.new"
-
-
-def _sweep_building(path: Path) -> None:
-    """Remove what creations of this cube left that were killed on this machine."""
-    for left in path.parent.glob(_building(Path(glob.escape(str(path))), "*").name):
-        *_, pid, since, _, _ = left.name.split(".")
-        if pid.isdigit() and not alive(int(pid), since):
-            shutil.rmtree(left, ignore_errors=True)
 
 
 def _build(folder: Path, spec: CubeSpec) -> None:
