@@ -17,7 +17,7 @@ from cubeforge.snapshots._ranges import Four, plan_ranges, read_ranges
 from cubeforge.snapshots.amrex_fab import FAB_LIMIT, FabLine, RealFormat, fab_line_text, parse_fab_line
 from cubeforge.snapshots.amrex_header import PlotHeader, parse_header
 from cubeforge.snapshots.amrex_layout import SharedLevel, assemble, triple
-from cubeforge.snapshots.amrex_level import LevelHeader, parse_level
+from cubeforge.snapshots.amrex_level import LevelHeader, parse_bounds, parse_level
 from cubeforge.snapshots.base import Box
 from cubeforge.snapshots.request import check_box, check_fields, check_patch
 
@@ -44,6 +44,7 @@ class AmrexSnapshot:
         self._root = Path(path)
         self._files = OpenFiles()
         self._real_seen: dict[int, RealFormat] = {}
+        self._bounds: dict[str, npt.NDArray[np.float64] | None] = {}
         raw = self._metadata("Header")
         digest = hashlib.sha256(raw)
         header = parse_header(raw, str(self._root / "Header"))
@@ -60,7 +61,7 @@ class AmrexSnapshot:
         self.units: Mapping[str, str] = {}
         self.hierarchy, self._stored, self.data_files = assemble(header, parsed)
         self._levels = tuple(
-            SharedLevel(part.version, part.ghost, part.real, triple(corner), part.version != 2)
+            SharedLevel(part.version, part.ghost, part.real, triple(corner))
             for part, corner in zip(parsed, header.domain_lo, strict=True)
         )
 
@@ -101,39 +102,44 @@ class AmrexSnapshot:
         except FileNotFoundError:
             raise SnapshotError(f"{path}: the data file is missing") from None
 
-    @cached_property
-    def _bounds(self) -> npt.NDArray[np.float64] | None:
-        if not all(level.bounded for level in self._levels):
-            return None
-        out = np.empty((len(self.fields), self.hierarchy.levels, 2))
-        for level, name in enumerate(self._paths):
-            path = f"{name}_H"
-            part = parse_level(self._metadata(path), str(self._root / path), extremes=True)
-            out[:, level, 0], out[:, level, 1] = part.minimum, part.maximum
-            if self._real(level).size == 4:
-                out[:, level] = _widen(out[:, level])
-        return out
-
     def bounds(self, field: str) -> npt.NDArray[np.float64] | None:
         """Stored minimum and maximum per level, shape (levels, 2); None where the layout has none.
 
         Covered cells count too. The file's figures are those before rounding to 32 bits, so for 32-bit data
-        they are widened by one such step.
+        they are widened by one such step. Reads the `Cell_H` files again, the first time for each field.
         """
         check_fields([field], self.fields, self.path)
-        table = self._bounds
-        return None if table is None else table[self.fields.index(field)].copy()
+        if field not in self._bounds:
+            self._bounds[field] = self._read_bounds(self.fields.index(field))
+        return self._bounds[field]
+
+    def _read_bounds(self, component: int) -> npt.NDArray[np.float64] | None:
+        out = np.empty((self.hierarchy.levels, 2))
+        for level, name in enumerate(self._paths):
+            path = f"{name}_H"
+            pair = parse_bounds(self._metadata(path), str(self._root / path), component)
+            if pair is None:
+                return None
+            out[level] = pair
+            if self._real(level).size == 4:
+                out[level] = _widen(*pair)
+        out.flags.writeable = False
+        return out
 
     def read_bytes(self, patches: npt.NDArray[np.int64], fields: Sequence[str]) -> npt.NDArray[np.int64]:
         """Bytes that `read` takes from disk for each whole patch, shape (n,), merged gaps included."""
         check_fields(fields, self.fields, self.path)
         patches = np.asarray(patches, dtype=np.int64)
         box = np.searchsorted(self._stored.first, patches, side="right") - 1
-        key = np.column_stack(
-            [self.hierarchy.level[patches], self.hierarchy.shape[patches], self._stored.shape[box]]
-        )
-        kinds, kind = np.unique(key, axis=0, return_inverse=True)
-        counts = [self._bytes_of(int(row[0]), row[1:4], row[4:7], fields) for row in kinds]
+        mesh, stored = self.hierarchy, self._stored
+        # One number a kind: sorting rows of seven would take seconds for a million patches.
+        whole = np.unique(_pack(stored.shape[box]), return_inverse=True)[1].reshape(-1)
+        key = (whole * 64 + mesh.level[patches]) << 21 | _pack(mesh.shape[patches], bits=7)
+        _, example, kind = np.unique(key, return_index=True, return_inverse=True)
+        counts = [
+            self._bytes_of(int(mesh.level[p]), mesh.shape[p], stored.shape[b], fields)
+            for p, b in zip(patches[example], box[example], strict=True)
+        ]
         return np.array(counts, dtype=np.int64)[kind.reshape(-1)]
 
     def _bytes_of(
@@ -263,10 +269,14 @@ class AmrexSnapshot:
         return offset + line.length
 
 
-def _widen(bounds: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
+def _pack(shapes: npt.NDArray[np.int32], bits: int = 21) -> npt.NDArray[np.int64]:
+    wide = shapes.astype(np.int64)
+    return (wide[:, 0] << 2 * bits) | (wide[:, 1] << bits) | wide[:, 2]
+
+
+def _widen(low: float, high: float) -> tuple[float, float]:
     # Data may have been rounded to nearest or towards zero: both lie within the two float32 neighbours.
     with np.errstate(over="ignore"):
-        single = bounds.astype(np.float32)
-        low = np.nextafter(single[:, 0], np.float32(-np.inf))
-        high = np.nextafter(single[:, 1], np.float32(np.inf))
-    return np.column_stack([low, high]).astype(np.float64)
+        below = np.nextafter(np.float32(low), np.float32(-np.inf))
+        above = np.nextafter(np.float32(high), np.float32(np.inf))
+    return float(below), float(above)

@@ -24,7 +24,6 @@ class SharedLevel:
     ghost: tuple[int, int, int]
     real: RealFormat | None
     corner: tuple[int, int, int]
-    bounded: bool
 
 
 @dataclass(frozen=True)

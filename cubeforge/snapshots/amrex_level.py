@@ -21,6 +21,8 @@ FloatArray = npt.NDArray[np.float64]
 _CELL = rb"\(-?\d++,-?\d++,-?\d++\)"
 _BOX_LINE = re.compile(rb"\(%s %s %s\) *+\n" % (_CELL, _CELL, _CELL))
 _PLACE_LINE = re.compile(rb"FabOnDisk: \S++ \d++ *+\n")
+_ROWS = 20_000
+"""Rows of minima taken at a time, which bounds the memory for their words."""
 _TO_SPACES = bytes.maketrans(b"(),\n", b"    ")
 
 
@@ -46,8 +48,6 @@ class LevelHeader:
         First byte of each box's record in its file.
     real : RealFormat or None
         None for version 1, where each record says it itself.
-    minimum, maximum : ndarray, shape (components,), float64, or None
-        Over all boxes; None where not stored (version 2) or not asked for.
     """
 
     version: int
@@ -59,12 +59,10 @@ class LevelHeader:
     file: npt.NDArray[np.int32]
     offset: npt.NDArray[np.int64]
     real: RealFormat | None
-    minimum: FloatArray | None
-    maximum: FloatArray | None
 
 
-def parse_level(raw: bytes, name: str, *, extremes: bool = False) -> LevelHeader:
-    """Read `Cell_H`.
+def parse_level(raw: bytes, name: str) -> LevelHeader:
+    """Read `Cell_H`, all but the minima and maxima.
 
     Parameters
     ----------
@@ -72,8 +70,6 @@ def parse_level(raw: bytes, name: str, *, extremes: bool = False) -> LevelHeader
         The file's contents.
     name : str
         The file, for messages.
-    extremes : bool
-        Also read the minima and maxima, which takes longer than all the rest.
 
     Raises
     ------
@@ -81,22 +77,37 @@ def parse_level(raw: bytes, name: str, *, extremes: bool = False) -> LevelHeader
         Malformed (file, line and what was expected), an unknown version, nodal data, or data that the
         file says were not saved.
     """
+    return _parse_level(Lines(raw, name), raw)
+
+
+def parse_bounds(raw: bytes, name: str, component: int) -> tuple[float, float] | None:
+    """Minimum and maximum of one component over all boxes in `Cell_H`; None where not stored (version 2).
+
+    Raises
+    ------
+    SnapshotError
+        As `parse_level`, or malformed minima or maxima.
+    """
     lines = Lines(raw, name)
+    part = _parse_level(lines, raw)
+    if part.version == 2:
+        return None
+    low = _extremes(lines, part, component, "minima")
+    high = _extremes(lines, part, component, "maxima")
+    return float(np.min(low)), float(np.max(high))
+
+
+def _parse_level(lines: Lines, raw: bytes) -> LevelHeader:
     version = lines.integer("the version of the layout", least=1)
     if version > 4:
-        raise SnapshotError(f"{name}: version {version} of the layout; 1 to 4 can be read")
+        raise SnapshotError(f"{lines.name}: version {version} of the layout; 1 to 4 can be read")
     lines.integer("how the files were written (0 or 1)")
     components = lines.integer("the number of components", least=1)
     ghost = _ghost(lines)
     lo, hi = _boxes(lines)
     files, file, offset = _places(lines, len(lo))
-    minimum = maximum = None
-    if version != 2 and extremes:
-        rows = 1 if version == 4 else len(lo)
-        minimum = _extremes(lines, rows, components, "minima", version).min(axis=0)
-        maximum = _extremes(lines, rows, components, "maxima", version).max(axis=0)
-    real = _real_format(raw, name) if version > 1 else None
-    return LevelHeader(version, components, ghost, lo, hi, files, file, offset, real, minimum, maximum)
+    real = _real_format(raw, lines.name) if version > 1 else None
+    return LevelHeader(version, components, ghost, lo, hi, files, file, offset, real)
 
 
 def _ghost(lines: Lines) -> tuple[int, int, int]:
@@ -170,23 +181,28 @@ def _check_block(block: bytes, pattern: re.Pattern[bytes], lines: Lines, first: 
             raise lines.wrong(line.decode("utf-8", errors="replace").strip(), wanted, first + number)
 
 
-def _extremes(lines: Lines, rows: int, components: int, what: str, version: int) -> FloatArray:
+def _extremes(lines: Lines, part: LevelHeader, component: int, what: str) -> FloatArray:
     lines.skip_blank()
-    if version != 4:
-        wanted = f'"{rows},{components}" before the {what}'
+    rows = 1 if part.version == 4 else len(part.lo)
+    if part.version != 4:
+        wanted = f'"{rows},{part.components}" before the {what}'
         line = lines.take(wanted)
-        if line.rstrip(",") != f"{rows},{components}":
+        if line.rstrip(",") != f"{rows},{part.components}":
             raise lines.wrong(line, wanted)
-    first = lines.number + 1
-    block = lines.block(rows, what)
-    row = re.compile(rb"(?:[^,\s]++,){%d} *+\n" % components)
-    _check_block(block, row, lines, first, f"{components} {what}, each with a comma after it")
-    try:
-        return np.array(block.replace(b",", b" ").split()).astype(np.float64).reshape(rows, components)
-    except ValueError:
-        raise SnapshotError(
-            f"{lines.name}, lines {first} to {first + rows - 1}: a word among the {what} is not a number"
-        ) from None
+    row = re.compile(rb"(?:[^,\s]++,){%d} *+\n" % part.components)
+    wanted = f"{part.components} {what}, each with a comma after it"
+    values = np.empty(rows)
+    for begin in range(0, rows, _ROWS):
+        first = lines.number + 1
+        block = lines.block(min(_ROWS, rows - begin), what)
+        _check_block(block, row, lines, first, wanted)
+        words = block.translate(None, b" \n").split(b",")[component : -1 : part.components]
+        for number, word in enumerate(words):
+            try:
+                values[begin + number] = float(word)
+            except ValueError:
+                raise lines.wrong(word.decode(errors="replace"), "a number", first + number) from None
+    return values
 
 
 def _real_format(raw: bytes, name: str) -> RealFormat:
