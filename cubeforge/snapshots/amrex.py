@@ -136,11 +136,11 @@ class AmrexSnapshot:
         whole = np.unique(_pack(stored.shape[box]), return_inverse=True)[1].reshape(-1)
         key = (whole * 64 + mesh.level[patches]) << 21 | _pack(mesh.shape[patches], bits=7)
         _, example, kind = np.unique(key, return_index=True, return_inverse=True)
-        counts = [
-            self._bytes_of(int(mesh.level[p]), mesh.shape[p], stored.shape[b], fields)
-            for p, b in zip(patches[example], box[example], strict=True)
-        ]
-        return np.array(counts, dtype=np.int64)[kind.reshape(-1)]
+        counts = np.empty(len(example), dtype=np.int64)
+        for number, (p, b) in enumerate(zip(patches[example], box[example], strict=True)):
+            counts[number] = self._bytes_of(int(mesh.level[p]), mesh.shape[p], stored.shape[b], fields)
+        out: npt.NDArray[np.int64] = counts[kind.reshape(-1)]
+        return out
 
     def _bytes_of(
         self, level: int, shape: npt.NDArray[np.int32], stored: npt.NDArray[np.int32], fields: Sequence[str]

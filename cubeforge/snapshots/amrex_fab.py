@@ -51,6 +51,14 @@ class RealFormat:
             return pairs.reshape(-1).view(f">f{self.size}")
         return raw.view(f"{self.order}f{self.size}")
 
+    def encode(self, numbers: npt.NDArray[np.floating]) -> bytes:
+        """Turn numbers into bytes, the inverse of `decode`."""
+        order = ">" if self.order == "swapped" else self.order
+        raw = numbers.astype(f"{order}f{self.size}").tobytes()
+        if self.order == "swapped":
+            return np.frombuffer(raw, dtype=np.uint8).reshape(-1, 2)[:, ::-1].tobytes()
+        return raw
+
     @property
     def text(self) -> str:
         """The format as AMReX writes it."""
