@@ -31,7 +31,8 @@ def exp_parts(x):  # type: ignore[no-untyped-def]
     """Split exp(x), -700 <= x < 700, into p and s: exp(x) = s p + s, and exp(x) - 1 = s p + (s - 1).
 
     p is the Taylor series of exp(r) - 1 for r = x - k ln(2), |r| <= ln(2) / 2, and s = 2^k, with ln(2) in
-    two parts (Cody & Waite 1980): both forms are good to rounding, also near 0. Adding and subtracting 1.5 * 2^52 rounds to the nearest integer.
+    two parts (Cody & Waite 1980): both forms are good to rounding, also near 0.
+    Adding and subtracting 1.5 * 2^52 rounds to the nearest integer.
     """
     k = (x * _LOG2_E + _ROUND) - _ROUND
     r = (x - k * _LN2_HIGH) - k * _LN2_LOW

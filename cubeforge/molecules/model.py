@@ -280,9 +280,8 @@ class Molecule:
     def missing_fraction(self, temperature: float) -> float:
         """Estimate the share of the partition function in levels above those at hand; 0 with a table.
 
-        Carries the density of states of the uppermost quarter of the levels on to infinity, which is
-        exact for a linear rotor in the limit of many levels. An atom whose file is complete looks worse
-        than it is.
+        Carries the mean spacing and weight of the uppermost quarter of the levels on to infinity: good to a
+        quarter of itself for linear rotors. An atom whose file is complete looks worse than it is.
         """
         if self.partition is not None:
             return 0.0
@@ -292,8 +291,10 @@ class Molecule:
         if start < 0 or energy[-1] == energy[start]:
             return 1.0
         kt = K_B * temperature
-        density = float(weight[start + 1 :].sum() / (energy[-1] - energy[start]))
-        above = density * kt * float(np.exp(-(energy[-1] - energy[0]) / kt))
+        count = len(energy) - 1 - start
+        spacing = float(energy[-1] - energy[start]) / count / kt
+        next_terms = float(weight[start + 1 :].mean()) / np.expm1(spacing)
+        above = float(next_terms * np.exp(-(energy[-1] - energy[0]) / kt))
         held = float((weight * np.exp(-(energy - energy[0]) / kt)).sum())
         return above / (above + held)
 
