@@ -9,6 +9,7 @@ import contextlib
 import math
 import os
 from collections.abc import Callable, Iterator
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -26,6 +27,9 @@ from cubeforge.errors import CubeError
 
 BUFFER_LIMIT = 512 * 2**20
 """Bytes of the buffer that a row of tiles is gathered in; above, the row is done by groups of channels."""
+
+THREADS = 4
+"""Tiles that are decoded at the same time."""
 
 _BLOCK = 2880
 _LOW = 0xFFFFFFFF
@@ -61,6 +65,7 @@ class _Work:
     done: npt.NDArray[np.bool_]
     limit: int
     progress: Callable[[], None]
+    threads: ThreadPoolExecutor
 
 
 def export_fits(
@@ -76,7 +81,7 @@ def export_fits(
     """Write the cube as a FITS file: float32, axes RA, Dec, velocity.
 
     Every tile is compared with its checksum in the ledger on the way. Memory: a row of tiles, at most
-    `buffer_limit`, and one tile.
+    `buffer_limit`, and `THREADS` tiles.
 
     Parameters
     ----------
@@ -169,13 +174,13 @@ def _export(
             "partial export, which has NaN there"
         )
     counter = _count(progress, len(images) * len(done))
-    work = _Work(cube, done, limit, counter)
     headers = [_whole_header(image, index, len(images)) for index, image in enumerate(images)]
     size = sum(len(keywords.tostring()) for keywords in headers) + sum(image.data_size for image in images)
     with disk_errors(path, size):
         make_folders(path.parent)
         sweep_beside(path)
-        with _replacing(path) as file:
+        with _replacing(path) as file, ThreadPoolExecutor(THREADS) as threads:
+            work = _Work(cube, done, limit, counter, threads)
             os.ftruncate(file, size)
             offset = 0
             for image, keywords in zip(images, headers, strict=True):
@@ -250,12 +255,15 @@ def _write_rows(file: int, start: int, image: _Image, work: _Work) -> Iterator[i
     rows, columns = spec.tile_grid
     size = image.dtype.itemsize
     group = max(1, min(image.planes, work.limit // (min(spec.tile[0], ny) * nx * size)))
+    # One buffer for all: a fresh one for each row costs the page faults again, and lives beside the old one.
+    memory = np.empty(group * min(spec.tile[0], ny) * nx, dtype=image.dtype)
     for row in range(rows):
         along_y, _ = spec.tile_slices(row * columns)
         height = along_y.stop - along_y.start
         for first in range(0, image.planes, group):
             planes = slice(first, min(first + group, image.planes))
-            buffer = np.empty((planes.stop - first, height, nx), dtype=image.dtype)
+            count = planes.stop - first
+            buffer = memory[: count * height * nx].reshape(count, height, nx)
             _gather(buffer, planes, row, image, work)
             yield checksums.sum_words(buffer)
             _to_file_order(buffer)
@@ -264,12 +272,15 @@ def _write_rows(file: int, start: int, image: _Image, work: _Work) -> Iterator[i
 
 
 def _gather(buffer: npt.NDArray[Any], planes: slice, row: int, image: _Image, work: _Work) -> None:
-    """Fill `buffer` (planes, y, x) with a row of tiles."""
+    """Fill `buffer` (planes, y, x) with a row of tiles, in a few threads: decoding lets them run."""
     spec = work.cube.spec
-    for column in range(spec.tile_grid[1]):
-        tile = row * spec.tile_grid[1] + column
+    first = row * spec.tile_grid[1]
+
+    def fill(tile: int) -> None:
         _, along_x = spec.tile_slices(tile)
         buffer[:, :, along_x] = image.read(tile)[planes] if work.done[tile] else np.nan
+
+    for _ in work.threads.map(fill, range(first, first + spec.tile_grid[1])):
         if planes.stop == image.planes:
             work.progress()
 
