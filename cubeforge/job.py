@@ -306,7 +306,7 @@ class OutputSection(_Section):
 
 
 class Job(_Section):
-    """One render. `folder` is where relative paths start."""
+    """One render. `folder` is where relative paths start; `raw` is what the file says, for other processes."""
 
     snapshot: SnapshotSection
     gas: GasSection
@@ -317,6 +317,7 @@ class Job(_Section):
     region: RegionSection = RegionSection()
     rays: RaySection = RaySection()
     folder: str = Field(default=".", exclude=True)
+    raw: dict[str, Any] = Field(default_factory=dict, exclude=True)
 
     def resolve(self, path: str) -> Path:
         """A path of the job file, relative to the file's own folder."""
@@ -348,7 +349,7 @@ def _known_keys(location: tuple[Any, ...]) -> list[str]:
         if not inner:
             return []
         model = inner[0]
-    return [name for name in model.model_fields if name != "folder"]
+    return [name for name in model.model_fields if name not in ("folder", "raw")]
 
 
 def _sentence(error: Any, source: str) -> str:
@@ -381,10 +382,11 @@ def parse_job(data: dict[str, Any], *, folder: str | Path = ".", source: str = "
     JobError
         One line for each thing that is wrong.
     """
-    if "folder" in data:
-        raise JobError(f"{source}: unknown key 'folder'; {nearest('folder', _known_keys(()))}")
+    for reserved in ("folder", "raw"):
+        if reserved in data:
+            raise JobError(f"{source}: unknown key {reserved!r}; {nearest(reserved, _known_keys(()))}")
     try:
-        return Job.model_validate({**data, "folder": str(folder)})
+        return Job.model_validate({**data, "folder": str(folder), "raw": data})
     except ValidationError as error:
         lines = dict.fromkeys(_sentence(e, source) for e in error.errors())
         raise JobError("\n".join(lines)) from None

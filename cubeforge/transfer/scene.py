@@ -10,6 +10,7 @@ import numpy.typing as npt
 
 from cubeforge.errors import PlanError
 from cubeforge.mesh.hierarchy import Hierarchy
+from cubeforge.mesh.leaves import leaf_counts
 from cubeforge.transfer.view import View, footprints, select_patches
 
 FloatArray = npt.NDArray[np.float64]
@@ -122,6 +123,8 @@ def _images(hierarchy: Hierarchy, region: Region, lo: FloatArray, hi: FloatArray
 def build_scene(hierarchy: Hierarchy, view: View, region: Region) -> Scene:
     """Find the patches in view and write rays and patches in finest units.
 
+    Patches that finer ones cover wholly are left out: no ray meets a cell of theirs.
+
     Raises
     ------
     PlanError
@@ -130,13 +133,14 @@ def build_scene(hierarchy: Hierarchy, view: View, region: Region) -> Scene:
     region_lo, region_hi = region.bounds(hierarchy)
     finest = hierarchy.finest_cell
     edge_lo, edge_hi = hierarchy.edges()
+    seen = leaf_counts(hierarchy) > 0
     picked = []
     for image in _images(hierarchy, region, region_lo, region_hi):
         shift = np.asarray(image) * hierarchy.domain[-1].astype(np.int64)
         lo = hierarchy.origin + (edge_lo + shift) * finest
         hi = hierarchy.origin + (edge_hi + shift) * finest
         rect, _ = footprints(view, np.maximum(lo, region_lo), np.minimum(hi, region_hi))
-        inside = np.all((lo < region_hi) & (hi > region_lo), axis=1) & select_patches(rect, view)
+        inside = seen & np.all((lo < region_hi) & (hi > region_lo), axis=1) & select_patches(rect, view)
         chosen = np.flatnonzero(inside)
         shift_cells = np.asarray(image) * hierarchy.domain.astype(np.int64)
         picked.append((chosen, shift_cells[hierarchy.level[chosen]], rect[chosen]))

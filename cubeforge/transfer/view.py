@@ -168,10 +168,10 @@ def rays_per_pixel(
         if side == 1:
             continue
         chosen = rect[level == lev]
-        left = np.clip(np.floor(chosen[:, 0]).astype(int) - x0, 0, x1 - x0)
-        right = np.clip(np.ceil(chosen[:, 1]).astype(int) - x0, 0, x1 - x0)
-        low = np.clip(np.floor(chosen[:, 2]).astype(int) - y0, 0, y1 - y0)
-        high = np.clip(np.ceil(chosen[:, 3]).astype(int) - y0, 0, y1 - y0)
+        left = np.clip(np.floor(chosen[:, 0] + 1e-6).astype(int) - x0, 0, x1 - x0)
+        right = np.clip(np.ceil(chosen[:, 1] - 1e-6).astype(int) - x0, 0, x1 - x0)
+        low = np.clip(np.floor(chosen[:, 2] + 1e-6).astype(int) - y0, 0, y1 - y0)
+        high = np.clip(np.ceil(chosen[:, 3] - 1e-6).astype(int) - y0, 0, y1 - y0)
         for a, b, c, d in zip(left, right, low, high, strict=True):
             block = out[c:d, a:b]
             np.maximum(block, side, out=block)

@@ -1,0 +1,162 @@
+"""Three ways to run batches of tiles behind one interface: here, on a local cluster, on a given scheduler."""
+
+from __future__ import annotations
+
+import contextlib
+import logging
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any, Protocol
+
+from cubeforge.cube.ledger import TileRecord
+from cubeforge.engine.batches import Batches
+from cubeforge.engine.shared import forget, run_batch
+from cubeforge.errors import CubeforgeError, EngineError
+
+WINDOW = 3
+"""Batches under way for each thread: enough that none waits for the next."""
+WAIT_FOR_WORKERS = 60.0
+"""Seconds to wait for the first worker of a given scheduler."""
+
+
+class Executor(Protocol):
+    """Runs batches of tiles."""
+
+    @property
+    def threads(self) -> int:
+        """Threads of each worker process."""
+        ...
+
+    def run(self, path: Path, batches: Batches) -> Iterator[list[TileRecord]]:
+        """Render all batches of the render described at `path` (see `shared.Shared`), in any order."""
+        ...
+
+
+class SerialExecutor:
+    """One thread, in this process, without dask."""
+
+    threads = 1
+
+    def run(self, path: Path, batches: Batches) -> Iterator[list[TileRecord]]:
+        """See `Executor`."""
+        try:
+            while tiles := batches.take(1):
+                records = run_batch(str(path), tiles)
+                batches.learn(records)
+                yield records
+        finally:
+            forget(str(path))
+
+
+class DaskExecutor:
+    """Workers of a dask scheduler; futures in a bounded window, so that a million tiles need no million futures."""
+
+    def __init__(self, client: Any) -> None:
+        self._client = client
+        self.threads = max(each["nthreads"] for each in self._workers().values())
+
+    def _workers(self) -> dict[str, Any]:
+        workers: dict[str, Any] = self._client.scheduler_info(n_workers=-1)["workers"]
+        if not workers:
+            try:
+                self._client.wait_for_workers(1, timeout=WAIT_FOR_WORKERS)
+            except TimeoutError:
+                raise EngineError(
+                    f"scheduler {self._client.scheduler.address}: no worker joined within {WAIT_FOR_WORKERS:.0f} s; "
+                    "start workers for it and run again"
+                ) from None
+            workers = self._client.scheduler_info(n_workers=-1)["workers"]
+        return workers
+
+    def run(self, path: Path, batches: Batches) -> Iterator[list[TileRecord]]:
+        """See `Executor`."""
+        from distributed import as_completed  # costs 0.4 s at start-up
+
+        slots = sum(each["nthreads"] for each in self._workers().values())
+        flow = as_completed()
+        under_way = 0
+
+        def feed() -> int:
+            tiles = batches.take(slots)
+            if not tiles:
+                return 0
+            flow.add(self._client.submit(run_batch, str(path), tiles, pure=False))
+            return 1
+
+        for _ in range(WINDOW * slots):
+            under_way += feed()
+        try:
+            while under_way:
+                future = next(flow)
+                records = self._result(future)
+                batches.learn(records)
+                under_way += feed() - 1
+                yield records
+        finally:
+            # Whatever is still queued when the render stops is of no use to anyone.
+            with contextlib.suppress(Exception):
+                self._client.cancel(list(flow.futures))
+
+    @staticmethod
+    def _result(future: Any) -> list[TileRecord]:
+        from distributed import CancelledError, KilledWorker  # costs 0.4 s at start-up
+
+        try:
+            result: list[TileRecord] = future.result()
+        except CubeforgeError:
+            raise
+        except KilledWorker as error:
+            raise EngineError(
+                f"a batch of tiles was lost with {error.allowed_failures + 1} workers, one after the other: out of "
+                "memory, most likely; give each worker less to do at once (--threads) or more memory, and run "
+                "again: it goes on where it stopped"
+            ) from error
+        except (CancelledError, OSError) as error:
+            raise EngineError(f"the scheduler or its workers went away ({error}); run again to go on") from error
+        return result
+
+
+@contextlib.contextmanager
+def local_executor(workers: int, threads: int) -> Iterator[DaskExecutor]:
+    """A dask cluster of processes on this machine, on the loopback address, gone at the end."""
+    import dask  # costs 0.5 s at start-up
+    from distributed import Client, LocalCluster
+
+    # Memory is bounded by the plan, which knows what it is for; dask pausing workers would only stall them.
+    quiet = {"distributed.worker.memory.target": False, "distributed.worker.memory.spill": False,
+             "distributed.worker.memory.pause": False, "distributed.worker.memory.terminate": False}  # fmt: skip
+    with (
+        dask.config.set(quiet),
+        LocalCluster(
+            n_workers=workers,
+            threads_per_worker=threads,
+            processes=True,
+            host="127.0.0.1",
+            dashboard_address=None,
+            worker_dashboard_address=None,
+            silence_logs=logging.ERROR,
+        ) as cluster,
+        Client(cluster) as client,
+    ):
+        yield DaskExecutor(client)
+
+
+@contextlib.contextmanager
+def scheduler_executor(scheduler_file: Path) -> Iterator[DaskExecutor]:
+    """Workers of a scheduler that is up already, found through its file.
+
+    Raises
+    ------
+    EngineError
+        The file is missing or the scheduler doesn't answer.
+    """
+    from distributed import Client  # costs 0.5 s at start-up
+
+    if not scheduler_file.is_file():
+        raise EngineError(f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first")
+    try:
+        client = Client(scheduler_file=str(scheduler_file), timeout=WAIT_FOR_WORKERS)
+    except (OSError, TimeoutError, ValueError) as error:
+        raise EngineError(f"{scheduler_file}: the scheduler does not answer ({error})") from error
+    with client:
+        yield DaskExecutor(client)

@@ -1,0 +1,236 @@
+"""The plan: everything about a render that is known before it runs, in numbers that can be checked."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from dataclasses import asdict, dataclass, field
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from cubeforge._version import VERSION
+from cubeforge.cube.spec import CubeSpec
+from cubeforge.engine.setup import Setup
+from cubeforge.errors import PlanError
+from cubeforge.quantities import show_bytes
+from cubeforge.transfer.march_kernels import BLOCK, CELL_HEAD, CELL_LINE
+
+NUMERICAL_VERSION = 1
+"""Raised by every change of the code that changes pixels."""
+MAPS = (("column", "g cm-2"),)
+"""By-products of every render."""
+BUILD_NUMBERS = 24
+"""Float64 numbers a cell that turning a patch into its optical form takes at the worst, measured
+(`tests/engine/test_memory.py`)."""
+TILES_LOOKED_AT, BLOCKS_LOOKED_AT = 2000, 16
+"""Tiles with the most patches whose bytes are summed, and heaviest tiles whose blocks of pixels are."""
+
+
+@dataclass(frozen=True)
+class Plan:
+    """Numbers of a render; reads no field data.
+
+    Attributes
+    ----------
+    spec : CubeSpec
+        The cube to be.
+    tiles : int
+    tile : int
+        Pixels a side.
+    patches : int
+        Patches in view, copies of a periodic domain counted once.
+    patches_of_tile : tuple of 3 ints
+        Fewest, median and most behind one tile.
+    read_bytes : int
+        Bytes on disk of the patches in view.
+    optical_bytes : int
+        Their size in memory as the march reads them.
+    cube_bytes, fits_bytes : int
+        Before compression, and as FITS.
+    channels, nodes : int
+        Channels, and velocities sampled in each.
+    tile_bytes : int
+        Memory of one tile under way, without patches.
+    group_bytes : int
+        Largest number of bytes of patches behind one tile.
+    block_bytes : int
+        Largest number of bytes of patches behind one block of pixels, the least that must be held at once.
+    build_bytes : int
+        Memory for turning one patch into its optical form.
+    caveats : tuple of str
+    """
+
+    spec: CubeSpec
+    tiles: int
+    tile: int
+    patches: int
+    patches_of_tile: tuple[int, int, int]
+    read_bytes: int
+    optical_bytes: int
+    cube_bytes: int
+    fits_bytes: int
+    channels: int
+    nodes: int
+    tile_bytes: int
+    group_bytes: int
+    block_bytes: int
+    build_bytes: int
+    caveats: tuple[str, ...] = field(default=())
+
+    def least_memory(self, threads: int) -> int:
+        """Bytes a worker with `threads` threads must be given at least."""
+        return threads * (self.tile_bytes + self.block_bytes + self.build_bytes)
+
+    def share(self, memory: int, threads: int) -> tuple[int, int]:
+        """Split a worker's memory: bytes for the cache, and bytes of patches that one thread may hold.
+
+        Raises
+        ------
+        PlanError
+            The memory is too small, with what would do.
+        """
+        free = memory - threads * (self.tile_bytes + self.build_bytes)
+        if memory < self.least_memory(threads):
+            raise PlanError(
+                f"memory: {show_bytes(memory)} a worker with {threads} threads is too little; this render needs "
+                f"{show_bytes(self.least_memory(threads))}: for each thread {show_bytes(self.tile_bytes)} for a "
+                f"tile, {show_bytes(self.block_bytes)} for the patches behind {BLOCK} x {BLOCK} pixels and "
+                f"{show_bytes(self.build_bytes)} to prepare a patch; fewer threads, smaller tiles or fewer "
+                "channels would do with less"
+            )
+        held = min(self.group_bytes, max(self.block_bytes, free // (2 * threads)))
+        return free - threads * held, held
+
+    def summary(self) -> dict[str, Any]:
+        """Plain numbers, for JSON."""
+        out = asdict(self)
+        out["spec"] = json.loads(self.spec.to_json())
+        return out
+
+
+def tile_area(setup: Setup, tile: int) -> tuple[int, int, int, int]:
+    """Pixels ``x0, x1, y0, y1`` of a tile; ids run along x first."""
+    size = setup.tile
+    columns = -(-setup.view.nx // size)
+    row, column = divmod(tile, columns)
+    return (
+        column * size,
+        min((column + 1) * size, setup.view.nx),
+        row * size,
+        min((row + 1) * size, setup.view.ny),
+    )
+
+
+def cell_bytes(lines: int) -> int:
+    """Bytes of a cell of an optical patch."""
+    return 4 * (CELL_HEAD + CELL_LINE * lines)
+
+
+def entry_bytes(setup: Setup) -> npt.NDArray[np.int64]:
+    """Optical bytes of each entry of the scene, shape (entries,)."""
+    return np.asarray(setup.hierarchy.cells(setup.scene.patch) * cell_bytes(1))
+
+
+def _bytes_behind(setup: Setup, sizes: npt.NDArray[np.int64], area: tuple[int, int, int, int]) -> int:
+    entries = setup.sky.patches_in(*area)
+    patches, first = np.unique(setup.scene.patch[entries], return_index=True)
+    return int(sizes[entries[first]].sum()) if len(patches) else 0
+
+
+def _behind(setup: Setup) -> tuple[int, int]:
+    """Most bytes of patches behind a tile, and behind a block of pixels; looked for in the fullest tiles."""
+    sizes = entry_bytes(setup)
+    fullest = np.argsort(setup.sky.counts().ravel(), kind="stable")[::-1][:TILES_LOOKED_AT]
+    areas = [tile_area(setup, int(tile)) for tile in fullest]
+    behind = np.array([_bytes_behind(setup, sizes, area) for area in areas])
+    heaviest = np.argsort(behind, kind="stable")[::-1][:BLOCKS_LOOKED_AT]
+    return int(behind.max()), max(_fullest_block(setup, sizes, areas[index]) for index in heaviest)
+
+
+def _fullest_block(setup: Setup, sizes: npt.NDArray[np.int64], area: tuple[int, int, int, int]) -> int:
+    x0, x1, y0, y1 = area
+    best = 0
+    for by in range(y0 // BLOCK, (y1 - 1) // BLOCK + 1):
+        for bx in range(x0 // BLOCK, (x1 - 1) // BLOCK + 1):
+            block = (bx * BLOCK, bx * BLOCK + BLOCK, by * BLOCK, by * BLOCK + BLOCK)
+            best = max(best, _bytes_behind(setup, sizes, block))
+    return best
+
+
+def fingerprint_parts(setup: Setup) -> dict[str, str]:
+    """What changes the pixels, part by part: readable where short, hashed where long."""
+    job = setup.job
+    kept = job.model_dump(mode="json", exclude={"snapshot": {"path"}, "output": {"cube", "tile"}})
+    parts = {f"job.{name}": json.dumps(section, sort_keys=True) for name, section in kept.items()}
+    return parts | {
+        "snapshot": setup.snapshot.identity,
+        "molecule": setup.molecule.digest,
+        "tile": str(setup.tile),
+        "numerical version": str(NUMERICAL_VERSION),
+    }
+
+
+def cube_spec(setup: Setup) -> CubeSpec:
+    """The cube that a setup will become."""
+    parts = fingerprint_parts(setup)
+    digest = hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
+    job, view = setup.job, setup.view
+    degree = 180.0 / np.pi
+    return CubeSpec(
+        shape=(setup.band.count, view.ny, view.nx),
+        tile=(setup.tile, setup.tile),
+        velocity_start=setup.band.first,
+        velocity_width=setup.band.width,
+        rest_frequency=setup.line.frequency,
+        pixel_rad=job.view.pixel_length / job.view.distance,
+        centre_lon=job.view.sky.longitude * degree,
+        centre_lat=job.view.sky.latitude * degree,
+        unit=job.output.brightness,
+        background_K=job.line.background,
+        molecule=setup.molecule.name,
+        line=setup.line.name,
+        fingerprint=digest,
+        fingerprint_parts=parts,
+        absolute=job.output.background == "kept",
+        maps=MAPS,
+        history=(
+            f"cubeforge {VERSION}",
+            f"snapshot {setup.snapshot.path}",
+            f"snapshot identity {setup.snapshot.identity}",
+            f"molecule {setup.molecule.name} {setup.molecule.digest}",
+            *(f"{name} {value}" for name, value in parts.items() if name.startswith("job.")),
+        ),
+    )
+
+
+def make_plan(setup: Setup) -> Plan:
+    """Count tiles, patches, bytes and memory."""
+    spec = cube_spec(setup)
+    spec.validate()
+    patches = np.unique(setup.scene.patch)
+    counts = np.sort(setup.sky.counts().ravel())
+    group, block = _behind(setup)
+    channels, ny, nx = spec.shape
+    cells = setup.hierarchy.cells(patches)
+    nodes = len(setup.band.nodes)
+    return Plan(
+        spec=spec,
+        tiles=spec.tiles,
+        tile=setup.tile,
+        patches=len(patches),
+        patches_of_tile=(int(counts[0]), int(counts[len(counts) // 2]), int(counts[-1])),
+        read_bytes=int(setup.snapshot.read_bytes(patches, setup.gas.required_fields()).sum()),
+        optical_bytes=int(cells.sum()) * cell_bytes(1),
+        cube_bytes=spec.intensity_bytes + 8 * len(MAPS) * ny * nx,
+        fits_bytes=-(-spec.intensity_bytes // 2880) * 2880 + 2 * 2880,
+        channels=channels,
+        nodes=nodes,
+        # The image and its copies in the unit of the cube, compressed, and on the way to disk; a ray's state.
+        tile_bytes=4 * 4 * channels * setup.tile**2 + 40 * channels * nodes,
+        group_bytes=group,
+        block_bytes=block,
+        build_bytes=8 * BUILD_NUMBERS * int(cells.max(initial=0)),
+        caveats=setup.caveats,
+    )

@@ -1,0 +1,192 @@
+"""The tile worker: a pure function of a setup and a tile's number, giving the tile's pixels."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from cubeforge.engine.cache import Patch, PatchCache
+from cubeforge.engine.plan import Plan, entry_bytes, make_plan, tile_area
+from cubeforge.engine.setup import Setup
+from cubeforge.errors import GasError
+from cubeforge.mesh.leaves import leaf_mask
+from cubeforge.quantities import planck, rayleigh_jeans_factor
+from cubeforge.transfer.march_kernels import BLOCK, STATISTICS, march_tile
+from cubeforge.transfer.optical import LineCells, pack_cells
+from cubeforge.transfer.pointers import addresses
+from cubeforge.transfer.view import rays_per_pixel
+
+Area = tuple[int, int, int, int]
+JANSKY = 1e-23
+"""erg / (s cm2 Hz)."""
+
+
+@dataclass(frozen=True)
+class TileResult:
+    """Pixels of one tile.
+
+    Attributes
+    ----------
+    image : ndarray, shape (channels, y, x), float32
+        In the cube's unit.
+    maps : ndarray, shape (maps, y, x), float64
+    statistics : tuple of float
+        See `TILE_STATISTICS`.
+    """
+
+    image: npt.NDArray[np.float32]
+    maps: npt.NDArray[np.float64]
+    statistics: tuple[float, ...]
+
+
+TILE_STATISTICS = (*STATISTICS, "mended_cells", "narrow_cells", "read_bytes")
+"""Statistics of a tile: what the march counts; cells mended, cells with lines narrower than planned for, and
+bytes read, in the patches that were loaded on the tile's behalf."""
+
+
+class TileWorker:
+    """Renders tiles of one setup in one process; safe from several threads.
+
+    Parameters
+    ----------
+    setup : Setup
+    plan : Plan, optional
+        Made from the setup if not given.
+    memory : int, optional
+        Bytes for patches and tiles together; unbounded without.
+    threads : int
+        Threads that will call `render` at the same time.
+    systemic : float, optional
+        Velocity added to the gas, cm/s; the job's number by default.
+
+    Raises
+    ------
+    PlanError
+        The memory is too small.
+    """
+
+    def __init__(
+        self,
+        setup: Setup,
+        plan: Plan | None = None,
+        *,
+        memory: int | None = None,
+        threads: int = 1,
+        systemic: float | None = None,
+    ) -> None:
+        self.setup = setup
+        self.plan = plan or make_plan(setup)
+        cache, self._held = (
+            (2**62, 2**62) if memory is None else self.plan.share(memory, threads)
+        )
+        given = setup.job.channels.systemic
+        self._systemic = float(systemic if systemic is not None else (0.0 if given == "mean" else given))
+        self._fields = setup.gas.required_fields()
+        self._entry_bytes = entry_bytes(setup)
+        self._loaded: dict[int, npt.NDArray[np.float64]] = {}
+        self.cache = PatchCache(self._load, cache)
+
+    def _load(self, patch: int) -> Patch:
+        """Read a patch and turn it into what the march needs."""
+        setup = self.setup
+        raw = setup.snapshot.read(patch, self._fields)
+        leaf = leaf_mask(setup.hierarchy, patch)
+        policy = "stop" if setup.job.gas.bad_cells == "stop" else "clear"
+        try:
+            state = setup.gas.state(raw, leaf, policy=policy, shape=tuple(setup.hierarchy.shape[patch]))
+        except GasError as error:
+            raise GasError(f"{setup.snapshot.path}: {self._where(patch)}: {error}") from None
+        b = setup.gas.line_width(state.temperature, setup.molecule.mass)
+        kappa, emis = setup.excitation.coefficients(state.n_molecule, state.temperature)
+        toward = setup.view.toward
+        velocity = self._systemic + sum(toward[axis] * state.velocity[axis] for axis in range(3))
+        narrow = np.count_nonzero((b < setup.narrowest * (1.0 - 1e-6)) & leaf)
+        read = int(setup.snapshot.read_bytes(np.array([patch]), self._fields)[0])
+        self._loaded[patch] = np.array([state.mended, narrow, read], dtype=np.float64)
+        return pack_cells(
+            state.density, velocity, [LineCells(kappa, emis, b)], setup.band, setup.unit_cm
+        )
+
+    def _where(self, patch: int) -> str:
+        hierarchy = self.setup.hierarchy
+        lo = hierarchy.lo[patch].tolist()
+        return f"level {hierarchy.level[patch]}, patch {patch} (first cell {lo})"
+
+    def _groups(self, area: Area) -> Iterator[tuple[Area, npt.NDArray[np.int64]]]:
+        """Cut an area until the patches behind each part fit; down to a block of pixels, never across one."""
+        entries = self.setup.sky.patches_in(*area)
+        _, first = np.unique(self.setup.scene.patch[entries], return_index=True)
+        x0, x1, y0, y1 = area
+        wide, high = (x1 - 1) // BLOCK > x0 // BLOCK, (y1 - 1) // BLOCK > y0 // BLOCK
+        if self._entry_bytes[entries[first]].sum() <= self._held or not (wide or high):
+            yield area, entries
+            return
+        if wide and (x1 - x0 >= y1 - y0 or not high):
+            cut = max(x0 // BLOCK + 1, (x0 + x1) // (2 * BLOCK)) * BLOCK
+            parts = ((x0, cut, y0, y1), (cut, x1, y0, y1))
+        else:
+            cut = max(y0 // BLOCK + 1, (y0 + y1) // (2 * BLOCK)) * BLOCK
+            parts = ((x0, x1, y0, cut), (x0, x1, cut, y1))
+        for part in parts:
+            yield from self._groups(part)
+
+    def _rays(self, area: Area, entries: npt.NDArray[np.int64]) -> npt.NDArray[np.int32]:
+        x0, x1, y0, y1 = area
+        section = self.setup.job.rays
+        if section.per_side != "auto":
+            return np.full((y1 - y0, x1 - x0), section.per_side, dtype=np.int32)
+        scene = self.setup.scene
+        return rays_per_pixel(
+            self.setup.view, scene.rect[entries], scene.level[entries], self.setup.level_cell, area, section.most
+        )
+
+    def _march(self, area: Area, entries: npt.NDArray[np.int64], statistics: npt.NDArray[Any]) -> tuple[Any, Any]:
+        """Image and column of one group of pixels, in kelvins above the background."""
+        scene, band = self.setup.scene, self.setup.band
+        x0, x1, y0, y1 = area
+        image = np.zeros((band.count, y1 - y0, x1 - x0), dtype=np.float32)
+        column = np.zeros((y1 - y0, x1 - x0))
+        patches = [self.cache.get(int(patch)) for patch in scene.patch[entries]]
+        march_tile(
+            np.array(area, dtype=np.int64), self._rays(area, entries), scene.start, scene.step_x, scene.step_y,
+            scene.direction, scene.box, scene.sphere, scene.cell, scene.lo[entries], scene.hi[entries],
+            scene.level[entries], scene.scale, scene.rect[entries], addresses(patches), 1, np.zeros(1),
+            band.sampled(), band.weights, band.reach, band.cut, scene.longest, image, column, statistics,
+        )  # fmt: skip
+        return image, column
+
+    def render(self, tile: int) -> TileResult:
+        """Render one tile.
+
+        Raises
+        ------
+        SnapshotError, GasError, ExcitationError
+            A patch behind the tile cannot be read or used; the message names it.
+        """
+        x0, x1, y0, y1 = tile_area(self.setup, tile)
+        image = np.zeros((self.setup.band.count, y1 - y0, x1 - x0), dtype=np.float32)
+        maps = np.zeros((1, y1 - y0, x1 - x0))
+        statistics = np.zeros(len(STATISTICS))
+        for area, entries in self._groups((x0, x1, y0, y1)):
+            rows, columns = slice(area[2] - y0, area[3] - y0), slice(area[0] - x0, area[1] - x0)
+            if len(entries):
+                image[:, rows, columns], maps[0, rows, columns] = self._march(area, entries, statistics)
+        loaded = np.zeros(3)
+        for patch in list(self._loaded):
+            loaded += self._loaded.pop(patch, 0.0)
+        return TileResult(self._in_unit(image), maps, (*statistics.tolist(), *loaded.tolist()))
+
+    def _in_unit(self, image: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
+        """Kelvins above the background -> what the job asks for, in place."""
+        spec = self.plan.spec
+        factor = rayleigh_jeans_factor(spec.rest_frequency)
+        if spec.absolute:
+            image += np.float32(factor * planck(spec.rest_frequency, spec.background_K))
+        if spec.unit != "K":
+            scale = 1.0 / (factor * JANSKY)
+            image *= np.float32(scale * spec.pixel_rad**2 if spec.unit == "Jy/pixel" else scale)
+        return image
