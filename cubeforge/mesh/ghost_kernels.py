@@ -36,8 +36,9 @@ def beside_leaves(leaf, need):  # type: ignore[no-untyped-def]
 def _plane_bounds(mask, box, axis, planes):  # type: ignore[no-untyped-def]
     """Bounding box of the True cells in each plane of `box` across `axis`; low > high where a plane is empty.
 
-    box: (6,) int64, low then high corner; planes: (cells along axis, 6) int64, out.
+    box: (6,) int64, low then high corner; planes: (cells along axis, 6) int64, out. Returns the True cells.
     """
+    count = 0
     for p in range(box[3 + axis] - box[axis]):
         for a in range(3):
             planes[p, a] = box[3 + a]
@@ -46,11 +47,13 @@ def _plane_bounds(mask, box, axis, planes):  # type: ignore[no-untyped-def]
         for j in range(box[1], box[4]):
             for k in range(box[2], box[5]):
                 if mask[i, j, k]:
+                    count += 1
                     at = (i, j, k)
                     p = at[axis] - box[axis]
                     for a in range(3):
                         planes[p, a] = min(planes[p, a], at[a])
                         planes[p, 3 + a] = max(planes[p, 3 + a], at[a] + 1)
+    return count
 
 
 @njit(nogil=True, cache=True)
@@ -68,7 +71,7 @@ def _grow(box, other):  # type: ignore[no-untyped-def]
 def _best_cut(mask, box, parts):  # type: ignore[no-untyped-def]
     """Shrink `box` to its True cells and find the cut that leaves the least volume in two tight boxes.
 
-    parts: (2, 6) int64, out, the halves. Returns (volume of the shrunk box, volume of both halves).
+    parts: (2, 6) int64, out, the halves. Returns (volume of the shrunk box, True cells in it).
     """
     best = np.int64(1) << 62
     nothing = np.empty(6, np.int64)
@@ -76,11 +79,11 @@ def _best_cut(mask, box, parts):  # type: ignore[no-untyped-def]
         nothing[a] = box[3 + a]
         nothing[3 + a] = box[a]
     tight = nothing.copy()
-    volume = 0
+    volume = count = 0
     for axis in range(3):
         n = box[3 + axis] - box[axis]
         planes = np.empty((n, 6), np.int64)
-        _plane_bounds(mask, box, axis, planes)
+        count = _plane_bounds(mask, box, axis, planes)
         right = np.empty((n + 1, 6), np.int64)
         right_volume = np.zeros(n + 1, np.int64)
         right[n] = nothing
@@ -99,40 +102,47 @@ def _best_cut(mask, box, parts):  # type: ignore[no-untyped-def]
                 parts[0] = left
                 parts[1] = right[p + 1]
     box[:] = tight
-    return volume, best
+    return volume, count
 
 
 @njit(nogil=True, cache=True)
 def boxes_of(mask, low, high, extra):  # type: ignore[no-untyped-def]
-    """Tight boxes around the True cells of ``mask[low:high]``, cut where that saves more than `extra` cells.
+    """Tight boxes around the True cells of ``mask[low:high]``, cut where that saves over `extra` cells.
 
     mask: bool array; low, high: (3,) int64; returns (boxes, 6) int64, low then high corners; disjoint.
     """
     found = np.empty((8, 6), np.int64)
     done = 0
-    stack = np.empty((64, 6), np.int64)
+    stack = np.empty((8, 6), np.int64)
     stack[0, :3] = low
     stack[0, 3:] = high
     waiting = 1
     parts = np.empty((2, 6), np.int64)
+    around = np.empty((1, 6), np.int64)
+    cost, single = 0, -1
     while waiting > 0:
         waiting -= 1
         box = stack[waiting].copy()
-        volume, cut = _best_cut(mask, box, parts)
-        if volume == 0:
+        volume, count = _best_cut(mask, box, parts)
+        if single < 0:
+            single = volume
+            around[0] = box
+        if count == 0:
             continue
-        if cut + extra < volume and waiting + 2 <= len(stack):
+        # A shell pays only after its last face is cut off, so cut on while there is enough to save at all.
+        if volume - count > extra:
+            if waiting + 2 > len(stack):
+                stack = np.concatenate((stack, np.empty_like(stack)))
             stack[waiting] = parts[1]
             stack[waiting + 1] = parts[0]
             waiting += 2
             continue
         if done == len(found):
-            bigger = np.empty((2 * done, 6), np.int64)
-            bigger[:done] = found
-            found = bigger
+            found = np.concatenate((found, np.empty_like(found)))
         found[done] = box
         done += 1
-    return found[:done]
+        cost += volume + extra
+    return around if done > 1 and cost > single + extra else found[:done]
 
 
 @njit(nogil=True, cache=True)
