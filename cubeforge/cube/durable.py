@@ -31,7 +31,7 @@ STAGING = "partial-"
 _FULL = {
     errno.ENOSPC: "the disk is full",
     errno.EDQUOT: "the disk quota is used up",
-    errno.EFBIG: "too large",
+    errno.EFBIG: "files may not be that large",
 }
 
 
