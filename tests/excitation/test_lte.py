@@ -81,7 +81,7 @@ def test_colder_gas_absorbs_and_warmer_gas_emits() -> None:
 
 
 def test_cold_gas_sits_in_the_ground_state() -> None:
-    """kT << hnu: kappa = (c^3 / 8 pi nu^3) A (g_u / g_l) n; here exp(-hnu/kT) = 1.6e-5, thrice in Q and once."""
+    """kT << hnu: kappa = (c^3 / 8 pi nu^3) A (g_u / g_l) n, less 4 exp(-hnu/kT) = 6e-5."""
     excitation = lte()
     line = excitation.line
     expected = C**3 / (8 * math.pi * line.frequency**3) * line.einstein_a * 3.0
@@ -183,7 +183,7 @@ def test_a_range_that_is_no_whole_bin_is_cut_to_whole_ones() -> None:
     assert 9.1 <= excitation.t_low < 9.1 * 65 / 64
     assert 50.3 * 63 / 64 < excitation.t_high <= 50.3
     narrow = replace(molecule, partition=PartitionTable([10.0, 10.01, 10.02], [1.0, 1.0, 1.0]))
-    with pytest.raises(ExcitationError, match="no temperatures between 10 and 10.02 K"):
+    with pytest.raises(ExcitationError, match=r"no temperatures between 10 and 10\.02 K"):
         LteExcitation(narrow, narrow.transition("2-1"), 2.725)
 
 

@@ -52,9 +52,9 @@ def test_kirchhoffs_law_above_a_background() -> None:
 
 @pytest.mark.parametrize(("name", "line"), [("CO", "1-0"), ("CO", "6-5"), ("N2H+", "1-0"), ("HCN", "3-2")])
 def test_opacity_from_the_b_coefficients(name: str, line: str) -> None:
-    """alpha = (h nu / 4 pi) (n_1 B_12 - n_2 B_21) phi(nu), with A_21 = 2 h nu^3 / c^2 B_21, g_1 B_12 = g_2 B_21.
+    """alpha = (h nu / 4 pi) (n_1 B_12 - n_2 B_21) phi(nu), A_21 = 2 h nu^3 / c^2 B_21, g_1 B_12 = g_2 B_21.
 
-    Rybicki & Lightman 1979, eqs. 1.72a, 1.72b, 1.74. Over velocity, phi(v) dv = phi(nu) dnu and dnu = nu / c dv.
+    Rybicki & Lightman 1979, eqs. 1.72a, 1.72b, 1.74; over velocity, phi(v) = phi(nu) nu / c.
     """
     lte = excitation(name, line)
     levels, transition = lte.molecule, lte.line
@@ -77,8 +77,8 @@ def test_opacity_from_the_b_coefficients(name: str, line: str) -> None:
 def test_column_density_of_a_linear_molecule(name: str, line: str) -> None:
     """N_tot = 3h / (8 pi^3 S mu^2) (Q / g_u) exp(E_u/kT) / (exp(h nu/kT) - 1) int tau dv, S = J / (2J + 1).
 
-    Mangum & Shirley 2015, PASP 127, 266, their eq. 31 and section 6.1 (from memory), with Q = kT/hB + 1/3: 0.5 %
-    from 15 K up, where that is what limits. A column of 1 cm^-2 must come back.
+    Mangum & Shirley 2015, PASP 127, 266, their eq. 31 and section 6.1 (from memory), with Q = kT/hB + 1/3, good
+    to 0.5 % from 15 K up. A column of 1 cm^-2 must come back.
     """
     lte = excitation(name, line)
     nu, upper = lte.line.frequency, lte.line.upper
@@ -106,8 +106,8 @@ def test_column_density_of_c18o(temperature: float) -> None:
 def test_column_density_of_13co(temperature: float) -> None:
     """N(13CO) = 2.42e14 (T + 0.88) / (1 - exp(-5.29/T)) int tau dv, in cm^-2 and km/s.
 
-    Bourke et al. 1997, ApJ 476, 781 (from memory), who took a dipole moment of 0.112 D where 0.11046 D is in use
-    now: N goes with its inverse square.
+    Bourke et al. 1997, ApJ 476, 781 (from memory), who took a dipole moment of 0.112 D where 0.11046 D is
+    in use now: N goes with its inverse square.
     """
     factor = 2.42e14 * (temperature + 0.88) / (1.0 - math.exp(-5.29 / temperature)) / 1e5
     factor *= (0.112 / 0.11046) ** 2
