@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import pickle
 from dataclasses import replace
 
 import numpy as np
@@ -98,6 +99,25 @@ def test_any_number_of_cells(size: int) -> None:
         one_kappa, one_emis = excitation.at(float(temperature[i]))
         assert kappa[i] == pytest.approx(n_mol[i] * one_kappa, rel=1e-15)
         assert emis[i] == pytest.approx(n_mol[i] * one_emis, rel=1e-15)
+
+
+def test_a_cell_does_not_depend_on_its_place() -> None:
+    """Bit for bit: vector lanes, the rest of a block and its end do the same arithmetic."""
+    rng = np.random.default_rng(2)
+    n_mol, temperature = rng.uniform(0, 1, 1500), rng.uniform(3, 900, 1500)
+    excitation = lte()
+    whole = excitation.coefficients(n_mol, temperature)
+    for first, last in ((0, 1), (3, 10), (17, 530), (511, 1499)):
+        part = excitation.coefficients(n_mol[first:last], temperature[first:last])
+        for found, expected in zip(part, whole, strict=True):
+            np.testing.assert_array_equal(found, expected[first:last])
+
+
+def test_it_travels_to_other_processes() -> None:
+    excitation = lte("HCO+", "3-2")
+    copy = pickle.loads(pickle.dumps(excitation))
+    assert copy.at(12.3) == excitation.at(12.3)
+    assert copy.molecule.digest == excitation.molecule.digest
 
 
 def test_shape_and_order_are_kept() -> None:

@@ -77,8 +77,8 @@ def test_opacity_from_the_b_coefficients(name: str, line: str) -> None:
 def test_column_density_of_a_linear_molecule(name: str, line: str) -> None:
     """N_tot = 3h / (8 pi^3 S mu^2) (Q / g_u) exp(E_u/kT) / (exp(h nu/kT) - 1) int tau dv, S = J / (2J + 1).
 
-    Mangum & Shirley 2015, PASP 127, 266, their eq. 31 and section 6.1 (from memory), with Q = kT/hB + 1/3, good
-    to 0.5 % from 15 K up. A column of 1 cm^-2 must come back.
+    Mangum & Shirley 2015, PASP 127, 266, their eq. 31 and section 6.1 (from memory), with Q = kT/hB + 1/3,
+    good to 0.5 % from 15 K up. A column of 1 cm^-2 must come back.
     """
     lte = excitation(name, line)
     nu, upper = lte.line.frequency, lte.line.upper
