@@ -83,7 +83,10 @@ def make_cloud(seed: int) -> Cloud:
 
 
 def _random_field(rng: np.random.Generator, count: int, slope: float, solenoidal: bool = False) -> Array:
-    """Periodic Gaussian fields of power k^-slope and unit variance, shape (count, GRID, GRID, GRID)."""
+    """Periodic Gaussian fields of power k^-slope, shape (count, GRID, GRID, GRID).
+
+    Each of unit variance; the components of a solenoidal one have unit variance on average.
+    """
     whole, half = np.fft.fftfreq(GRID, 1 / GRID), np.fft.rfftfreq(GRID, 1 / GRID)
     k = np.meshgrid(whole, whole, half, indexing="ij", sparse=True)
     square = k[0] ** 2 + k[1] ** 2 + k[2] ** 2
@@ -96,7 +99,11 @@ def _random_field(rng: np.random.Generator, count: int, slope: float, solenoidal
         for axis in range(3):
             modes[axis] -= k[axis] * along
     fields = np.fft.irfftn(modes, s=(GRID, GRID, GRID), axes=(1, 2, 3))
-    result: Array = fields / fields.std(axis=(1, 2, 3), keepdims=True)
+    spread = fields.std(axis=(1, 2, 3), keepdims=True)
+    if solenoidal:
+        # One factor for all components: scaling each by its own would bring the divergence back.
+        spread = np.sqrt(np.mean(spread**2))
+    result: Array = fields / spread
     return result
 
 
