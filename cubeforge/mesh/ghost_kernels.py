@@ -106,12 +106,25 @@ def _best_cut(mask, box, parts):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=True)
+def _any_in(mask, low, high):  # type: ignore[no-untyped-def]
+    """Whether some cell of ``mask[low:high]`` is True."""
+    for i in range(low[0], high[0]):
+        for j in range(low[1], high[1]):
+            for k in range(low[2], high[2]):
+                if mask[i, j, k]:
+                    return True
+    return False
+
+
+@njit(nogil=True, cache=True)
 def boxes_of(mask, low, high, extra):  # type: ignore[no-untyped-def]
     """Tight boxes around the True cells of ``mask[low:high]``, cut where that saves over `extra` cells.
 
     mask: bool array; low, high: (3,) int64; returns (boxes, 6) int64, low then high corners; disjoint.
     """
     found = np.empty((8, 6), np.int64)
+    if not _any_in(mask, low, high):
+        return found[:0]
     done = 0
     stack = np.empty((8, 6), np.int64)
     stack[0, :3] = low
@@ -143,6 +156,50 @@ def boxes_of(mask, low, high, extra):  # type: ignore[no-untyped-def]
         done += 1
         cost += volume + extra
     return around if done > 1 and cost > single + extra else found[:done]
+
+
+@njit(nogil=True, cache=True)
+def mark_held(patches, corner, lo, shape, held):  # type: ignore[no-untyped-def]
+    """Mark the cells of a window that patches of its level hold.
+
+    patches: ids; corner: (3,) int64, the window's corner in index space, moved by the periodic image; lo,
+    shape: (all patches, 3) int32; held: (nx, ny, nz) bool, out.
+    """
+    for patch in patches:
+        first, last = _overlap(patch, corner, lo, shape, held.shape)
+        for i in range(first[0], last[0]):
+            for j in range(first[1], last[1]):
+                held[i, j, first[2] : last[2]] = True
+
+
+@njit(nogil=True, cache=True)
+def _overlap(patch, corner, lo, shape, size):  # type: ignore[no-untyped-def]
+    """First cells and ends of the part of a window that a patch holds, from the window's corner."""
+    first = np.empty(3, np.int64)
+    last = np.empty(3, np.int64)
+    for a in range(3):
+        first[a] = max(lo[patch, a] - corner[a], 0)
+        last[a] = max(min(lo[patch, a] + shape[patch, a] - corner[a], size[a]), first[a])
+    return first, last
+
+
+@njit(nogil=True, cache=True)
+def own_boxes(patches, corner, lo, shape, stored, extra):  # type: ignore[no-untyped-def]
+    """Boxes to read of patches of the window's level: rows of patch, low corner, high corner in the window.
+
+    Arguments as in `mark_held`; stored: (nx, ny, nz) bool, cells wanted; extra: as in `boxes_of`.
+    """
+    rows = np.empty((8, 7), np.int64)
+    n = 0
+    for patch in patches:
+        first, last = _overlap(patch, corner, lo, shape, stored.shape)
+        for box in boxes_of(stored, first, last, extra):
+            if n == len(rows):
+                rows = np.concatenate((rows, np.empty_like(rows)))
+            rows[n, 0] = patch
+            rows[n, 1:] = box
+            n += 1
+    return rows[:n]
 
 
 @njit(nogil=True, cache=True)

@@ -16,7 +16,7 @@ from functools import cached_property
 import numpy as np
 import numpy.typing as npt
 
-from cubeforge.mesh.ghost_kernels import beside_leaves, boxes_of, mark_parents
+from cubeforge.mesh.ghost_kernels import beside_leaves, boxes_of, mark_held, mark_parents, own_boxes
 from cubeforge.mesh.hierarchy import Hierarchy
 from cubeforge.mesh.leaves import open_fraction
 from cubeforge.mesh.overlap import BoxIndex, box_index
@@ -129,8 +129,8 @@ class Planner:
     def around(self, patch: int) -> Window:
         """Window of `patch` with one cell more on each side; in it, only the cells whose value is in want."""
         level, lo, hi = int(self.hierarchy.level[patch]), self._lo[patch], self._hi[patch]
-        leaf = open_fraction(self.hierarchy, level, lo, hi)
-        shown = np.ones(tuple(hi - lo), dtype=bool) if leaf is None else leaf > 0.0
+        open_part = self._open_part(level, lo - 1, hi + 1)
+        shown = open_part[1:-1, 1:-1, 1:-1] > 0.0 if open_part.size else np.ones(tuple(hi - lo), dtype=bool)
         need = np.zeros(tuple(hi - lo + 2), dtype=bool)
         if self.whole:
             need[...] = True
@@ -141,7 +141,7 @@ class Planner:
             ahead = np.moveaxis(need, axis, 0)
             ahead[:first] = False
             ahead[last:] = False
-        return self.window(level, lo - 1, need)
+        return self._window(level, lo - 1, need, open_part)
 
     def clip(self, level: int, lo: Ints, hi: Ints) -> list[tuple[int, int]]:
         """Range of the box [lo, hi) inside the domain, per axis; the whole of a periodic axis."""
@@ -162,17 +162,14 @@ class Planner:
         ]
         return [domain * turn for turn in itertools.product(*turns)]
 
-    def window(self, level: int, lo: Ints, need: BoolArray) -> Window:
+    def _window(self, level: int, lo: Ints, need: BoolArray, open_part: FloatArray) -> Window:
         """Plan the cells `need` of the box of `level` with its corner at `lo`."""
         hi = lo + need.shape
         images = self._images(level, lo, hi)
-        siblings = [(p, s) for s in images for p in self._index.overlapping(level, lo - s, hi - s).tolist()]
+        siblings = [(s, self._index.overlapping(level, lo - s, hi - s)) for s in images]
         held = np.zeros(need.shape, dtype=bool)
-        for patch, shift in siblings:
-            first = np.maximum(self._lo[patch] + shift - lo, 0).tolist()
-            last = (self._hi[patch] + shift - lo).tolist()
-            held[first[0] : last[0], first[1] : last[1], first[2] : last[2]] = True
-        open_part = self._open_part(level, lo, hi, images)
+        for shift, patches in siblings:
+            mark_held(patches, lo - shift, self.hierarchy.lo, self.hierarchy.shape, held)
         if open_part.size:
             stored = need & held & (open_part > 0.0)
             missing = need & ~held & (open_part > 0.0)
@@ -192,29 +189,27 @@ class Planner:
             coarse=self._coarser(level, lo, missing) if level and missing.any() else None,
         )
 
-    def _open_part(self, level: int, lo: Ints, hi: Ints, images: list[Ints]) -> FloatArray:
+    def _open_part(self, level: int, lo: Ints, hi: Ints) -> FloatArray:
         """Fraction of each cell of a box that no finer patch covers, periodic images included."""
         if level + 1 == self.hierarchy.levels:
             return ALL_OPEN
         result = ALL_OPEN
-        for shift in images:
+        for shift in self._images(level, lo, hi):
             part = open_fraction(self.hierarchy, level, lo - shift, hi - shift)
             if part is not None:
                 # images never overlap: where one is covered, the others are open
                 result = part if result.size == 0 else np.minimum(result, part)
         return result
 
-    def _own_parts(self, lo: Ints, stored: BoolArray, siblings: list[tuple[int, Ints]]) -> list[Part]:
+    def _own_parts(self, lo: Ints, stored: BoolArray, siblings: list[tuple[Ints, Ints]]) -> list[Part]:
         parts = []
-        size = np.array(stored.shape, dtype=np.int64)
         one = np.ones(3, np.int64)
-        for patch, shift in siblings:
-            corner = self._lo[patch] + shift - lo
-            low, high = np.maximum(corner, 0), np.minimum(self._hi[patch] + shift - lo, size)
-            if not stored[low[0] : high[0], low[1] : high[1], low[2] : high[2]].any():
-                continue
-            for box in boxes_of(stored, low, high, READ_COST):
-                parts.append(Part(patch, _box(box[:3] - corner, box[3:] - corner), box[:3], one, ALL_OPEN))
+        for shift, patches in siblings:
+            corner = lo - shift
+            rows = own_boxes(patches, corner, self.hierarchy.lo, self.hierarchy.shape, stored, READ_COST)
+            corner = corner - self._lo[rows[:, 0]]
+            for row, low, high in zip(rows, rows[:, 1:4] + corner, rows[:, 4:] + corner, strict=True):
+                parts.append(Part(int(row[0]), _box(low, high), row[1:4], one, ALL_OPEN))
         return parts
 
     def _fine_parts(self, level: int, lo: Ints, under: BoolArray, images: list[Ints]) -> list[Part]:
@@ -251,7 +246,7 @@ class Planner:
         low, high = low + [a for a, _ in inside], low + [b for _, b in inside]
         need = np.zeros(tuple(high - low), dtype=bool)
         mark_parents(missing, lo, ratio, low, need)
-        return self.window(level - 1, low, need)
+        return self._window(level - 1, low, need, self._open_part(level - 1, low, high))
 
 
 def _box(lo: Ints, hi: Ints) -> Box:
