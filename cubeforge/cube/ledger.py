@@ -258,13 +258,13 @@ def _merge(
         for name in merged.dtype.names or ():
             target[name] = part[name] if name in (part.dtype.names or ()) else np.nan
         start += len(part)
-    # Nearly always each tile has one record, and the cheaper sort, by tile alone, is enough.
+    # Nearly always each tile has one record: then the cheap sort, by tile alone, is all there is to do.
     order = np.argsort(merged["tile"])
     tile = merged["tile"][order]
-    if np.any(tile[1:] == tile[:-1]):
-        order = np.lexsort((merged["finished"], merged["tile"]))
-    merged = merged[order]
+    if not np.any(tile[1:] == tile[:-1]):
+        return np.take(merged, order), np.empty(0, dtype=np.int64)
+    merged = np.take(merged, np.lexsort((merged["finished"], merged["tile"])))
     same = merged["tile"][1:] == merged["tile"][:-1]
     differ = same & (merged["checksum"][1:] != merged["checksum"][:-1])
     conflicts = np.unique(merged["tile"][1:][differ]).astype(np.int64)
-    return merged[np.append(~same, True)] if len(merged) else merged, conflicts
+    return merged[np.append(~same, True)], conflicts
