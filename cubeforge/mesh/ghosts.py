@@ -91,7 +91,7 @@ class GhostFiller:
         stored = self._read(patch, rows)
         for row, name in enumerate(rows):
             values[row, 1:-1, 1:-1, 1:-1] = stored[name]
-        # No copy: the cells of the patch that change are covered ones, which no mean and no sibling's value uses.
+        # No copy: the cells of the patch that change are covered ones, which no mean and no value uses.
         home = patch, values[:, 1:-1, 1:-1, 1:-1]
         known = _Evaluation(self._read, rows, self._rows_to_weigh(rows), home).evaluate(window, values)
         known[1:-1, 1:-1, 1:-1] = True
