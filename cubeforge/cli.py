@@ -86,7 +86,9 @@ def _memory(_: click.Context, __: click.Parameter, value: str | None) -> int | N
 @click.argument("job", type=click.Path(path_type=Path))
 @click.option("--workers", default=1, show_default=True, type=click.IntRange(0),
               help="Processes of a local cluster; 0 renders in this process, without dask.")  # fmt: skip
-@click.option("--threads", default=1, show_default=True, type=click.IntRange(1), help="Threads of each worker.")
+@click.option(
+    "--threads", default=1, show_default=True, type=click.IntRange(1), help="Threads of each worker."
+)
 @click.option("--memory", callback=_memory, metavar="SIZE",
               help='Memory for patches and tiles in each worker, such as "2 GiB".')  # fmt: skip
 @click.option("--scheduler-file", type=click.Path(path_type=Path),
@@ -136,7 +138,9 @@ def export(cube: Path, fits: Path, overwrite: bool, partial: bool, maps: bool) -
 @main.command()
 @click.argument("folder", type=click.Path(path_type=Path))
 @click.option("--seed", default=7, show_default=True, help="Of the turbulence.")
-@click.option("--levels", default=4, show_default=True, type=click.IntRange(1, 8), help="Levels of refinement.")
+@click.option(
+    "--levels", default=4, show_default=True, type=click.IntRange(1, 8), help="Levels of refinement."
+)
 def demo(folder: Path, seed: int, levels: int) -> None:
     """Write a small snapshot of a turbulent clump and a job file for it into FOLDER."""
     from cubeforge.demo import write_demo

@@ -134,7 +134,7 @@ class LineSection(_Section):
     """The line, its carrier, and how the levels are populated."""
 
     molecule: str
-    transition: str | int = 0
+    transition: str | int = 1
     abundance: Number
     excitation: Literal["lte"] = "lte"
     background: Temperature = 2.725
@@ -281,7 +281,9 @@ class ChannelSection(_Section):
 
 
 def _ray_count(value: Any) -> int | str:
-    if value == "auto" or (isinstance(value, int) and not isinstance(value, bool) and 1 <= value <= 256):
+    if value == "auto":
+        return "auto"
+    if isinstance(value, int) and not isinstance(value, bool) and 1 <= value <= 256:
         return value
     raise ValueError(f'{value!r} is neither "auto" nor a whole number from 1 to 256')
 

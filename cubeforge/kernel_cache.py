@@ -1,8 +1,8 @@
 """Where compiled kernels are kept between runs.
 
 numba looks at a kernel's own file to see whether its compiled form is out of date, not at the kernels that it calls:
-after a change in one of those it would go on running the old code. So the folder is named by a hash of all rooms
-that hold kernels.
+after a change in one of those it would go on running the old code. So the folder is named by a hash of all files
+that have to do with numba.
 """
 
 from __future__ import annotations
@@ -17,12 +17,14 @@ ROOMS = ("mesh", "gas", "excitation", "transfer")
 
 
 def kernel_hash() -> str:
-    """Hash of all source files in the rooms that hold kernels."""
+    """Hash of the source files that mention numba, in the rooms that hold kernels."""
     digest = hashlib.sha256()
     package = Path(__file__).parent
     for room in ROOMS:
         for file in sorted((package / room).glob("*.py")):
-            digest.update(file.name.encode() + b"\0" + file.read_bytes())
+            content = file.read_bytes()
+            if b"numba" in content:
+                digest.update(file.name.encode() + b"\0" + content)
     return digest.hexdigest()[:16]
 
 
@@ -37,7 +39,9 @@ def _home() -> Path:
             continue
         if os.access(place, os.W_OK) and place.stat().st_uid == os.getuid():
             return place
-    raise OSError(f"no folder to keep compiled kernels in: neither {Path.home() / '.cache'} nor the temporary folder")
+    raise OSError(
+        f"no folder to keep compiled kernels in: neither {Path.home() / '.cache'} nor the temporary folder"
+    )
 
 
 def use_own_cache() -> None:

@@ -112,7 +112,9 @@ class DaskExecutor:
                 "again: it goes on where it stopped"
             ) from error
         except (CancelledError, OSError) as error:
-            raise EngineError(f"the scheduler or its workers went away ({error}); run again to go on") from error
+            raise EngineError(
+                f"the scheduler or its workers went away ({error}); run again to go on"
+            ) from error
         return result
 
 
@@ -153,7 +155,9 @@ def scheduler_executor(scheduler_file: Path) -> Iterator[DaskExecutor]:
     from distributed import Client  # costs 0.5 s at start-up
 
     if not scheduler_file.is_file():
-        raise EngineError(f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first")
+        raise EngineError(
+            f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first"
+        )
     try:
         client = Client(scheduler_file=str(scheduler_file), timeout=WAIT_FOR_WORKERS)
     except (OSError, TimeoutError, ValueError) as error:

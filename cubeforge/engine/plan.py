@@ -162,7 +162,9 @@ def _fullest_block(setup: Setup, sizes: npt.NDArray[np.int64], area: tuple[int, 
 def fingerprint_parts(setup: Setup) -> dict[str, str]:
     """What changes the pixels, part by part: readable where short, hashed where long."""
     job = setup.job
-    kept = job.model_dump(mode="json", exclude={"snapshot": {"path"}, "output": {"cube", "tile"}})
+    kept = job.model_dump(
+        mode="json", exclude={"snapshot": {"path"}, "line": {"molecule"}, "output": {"cube", "tile"}}
+    )
     parts = {f"job.{name}": json.dumps(section, sort_keys=True) for name, section in kept.items()}
     return parts | {
         "snapshot": setup.snapshot.identity,

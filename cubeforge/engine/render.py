@@ -201,7 +201,7 @@ def _drive(
     try:
         if watch:
             watch(Progress(done, total, begun, 0.0))
-        for records in executor.run(path, Batches(left)):
+        for records in executor.run(path, Batches(left.tolist())):
             lease.check()
             done += len(records)
             if watch:

@@ -149,9 +149,7 @@ def build_gas(job: Job, snapshot: Snapshot) -> GasModel:
     ) -> tuple[Source, Source, Source] | None:
         if given is None:
             return None
-        x, y, z = (
-            _source(job, snapshot, each, name, f"{name}[{axis}]") for axis, each in enumerate(given)
-        )
+        x, y, z = (_source(job, snapshot, each, name, f"{name}[{axis}]") for axis, each in enumerate(given))
         return x, y, z
 
     return GasModel(
@@ -170,6 +168,7 @@ def build_gas(job: Job, snapshot: Snapshot) -> GasModel:
         if width is None
         else microturbulence_b(sigma=width.sigma, b=width.b, fwhm=width.fwhm),
         abundance=job.line.abundance,
+        bad_cells="stop" if gas.bad_cells == "stop" else "clip",
     )
 
 

@@ -23,9 +23,9 @@ def systemic_velocity(setup: Setup) -> float:
     fields = setup.gas.required_fields()
     for patch in np.unique(setup.scene.patch):
         leaf = leaf_mask(setup.hierarchy, int(patch))
-        shape = tuple(setup.hierarchy.shape[patch])
-        policy = "stop" if setup.job.gas.bad_cells == "stop" else "clear"
-        state = setup.gas.state(setup.snapshot.read(int(patch), fields), leaf, policy=policy, shape=shape)
+        state = setup.gas.state(
+            setup.snapshot.read(int(patch), fields), leaf, f"{setup.snapshot.path}: patch {patch}"
+        )
         volume = float(np.prod(setup.hierarchy.cell_size[setup.hierarchy.level[patch]]))
         mass = np.where(leaf, state.density, 0.0) * volume
         toward = setup.view.toward

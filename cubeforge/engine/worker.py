@@ -12,7 +12,6 @@ import numpy.typing as npt
 from cubeforge.engine.cache import Patch, PatchCache
 from cubeforge.engine.plan import Plan, entry_bytes, make_plan, tile_area
 from cubeforge.engine.setup import Setup
-from cubeforge.errors import GasError
 from cubeforge.mesh.leaves import leaf_mask
 from cubeforge.quantities import planck, rayleigh_jeans_factor
 from cubeforge.transfer.march_kernels import BLOCK, STATISTICS, march_tile
@@ -80,9 +79,7 @@ class TileWorker:
     ) -> None:
         self.setup = setup
         self.plan = plan or make_plan(setup)
-        cache, self._held = (
-            (2**62, 2**62) if memory is None else self.plan.share(memory, threads)
-        )
+        cache, self._held = (2**62, 2**62) if memory is None else self.plan.share(memory, threads)
         given = setup.job.channels.systemic
         self._systemic = float(systemic if systemic is not None else (0.0 if given == "mean" else given))
         self._fields = setup.gas.required_fields()
@@ -95,21 +92,15 @@ class TileWorker:
         setup = self.setup
         raw = setup.snapshot.read(patch, self._fields)
         leaf = leaf_mask(setup.hierarchy, patch)
-        policy = "stop" if setup.job.gas.bad_cells == "stop" else "clear"
-        try:
-            state = setup.gas.state(raw, leaf, policy=policy, shape=tuple(setup.hierarchy.shape[patch]))
-        except GasError as error:
-            raise GasError(f"{setup.snapshot.path}: {self._where(patch)}: {error}") from None
+        state = setup.gas.state(raw, leaf, f"{setup.snapshot.path}: {self._where(patch)}")
         b = setup.gas.line_width(state.temperature, setup.molecule.mass)
         kappa, emis = setup.excitation.coefficients(state.n_molecule, state.temperature)
         toward = setup.view.toward
         velocity = self._systemic + sum(toward[axis] * state.velocity[axis] for axis in range(3))
         narrow = np.count_nonzero((b < setup.narrowest * (1.0 - 1e-6)) & leaf)
         read = int(setup.snapshot.read_bytes(np.array([patch]), self._fields)[0])
-        self._loaded[patch] = np.array([state.mended, narrow, read], dtype=np.float64)
-        return pack_cells(
-            state.density, velocity, [LineCells(kappa, emis, b)], setup.band, setup.unit_cm
-        )
+        self._loaded[patch] = np.array([state.mended_cells, narrow, read], dtype=np.float64)
+        return pack_cells(state.density, velocity, [LineCells(kappa, emis, b)], setup.band, setup.unit_cm)
 
     def _where(self, patch: int) -> str:
         hierarchy = self.setup.hierarchy
@@ -141,10 +132,17 @@ class TileWorker:
             return np.full((y1 - y0, x1 - x0), section.per_side, dtype=np.int32)
         scene = self.setup.scene
         return rays_per_pixel(
-            self.setup.view, scene.rect[entries], scene.level[entries], self.setup.level_cell, area, section.most
+            self.setup.view,
+            scene.rect[entries],
+            scene.level[entries],
+            self.setup.level_cell,
+            area,
+            section.most,
         )
 
-    def _march(self, area: Area, entries: npt.NDArray[np.int64], statistics: npt.NDArray[Any]) -> tuple[Any, Any]:
+    def _march(
+        self, area: Area, entries: npt.NDArray[np.int64], statistics: npt.NDArray[Any]
+    ) -> tuple[Any, Any]:
         """Image and column of one group of pixels, in kelvins above the background."""
         scene, band = self.setup.scene, self.setup.band
         x0, x1, y0, y1 = area

@@ -87,21 +87,21 @@ class Hierarchy:
     @property
     def extent(self) -> FloatArray:
         """Physical size of the domain, shape (3,), in the snapshot's length unit."""
-        return self.domain[0] * self.cell_size[0]
+        return np.asarray(self.domain[0] * self.cell_size[0])
 
     @property
     def centre(self) -> FloatArray:
         """Physical centre of the domain, shape (3,), in the snapshot's length unit."""
-        return self.origin + 0.5 * self.extent
+        return np.asarray(self.origin + 0.5 * self.extent)
 
     @property
     def finest_cell(self) -> FloatArray:
         """Size of one finest unit, shape (3,), in the snapshot's length unit."""
-        return self.cell_size[-1]
+        return np.asarray(self.cell_size[-1])
 
     def cells(self, patches: Any = slice(None)) -> npt.NDArray[np.int64]:
         """Stored cells of each of `patches`, shape (n,)."""
-        return self.shape[patches].astype(np.int64).prod(axis=-1)
+        return np.asarray(self.shape[patches].astype(np.int64).prod(axis=-1))
 
     def validate(self) -> None:
         """Refuse a hierarchy that contradicts itself.

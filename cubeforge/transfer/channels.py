@@ -56,7 +56,7 @@ class Band:
     @property
     def velocities(self) -> npt.NDArray[np.float64]:
         """Channel centres, cm/s, shape (count,)."""
-        return self.first + self.width * np.arange(self.count)
+        return np.asarray(self.first + self.width * np.arange(self.count), dtype=np.float64)
 
     def sampled(self) -> npt.NDArray[np.float32]:
         """All sampled velocities in channels from the middle of the band, shape (nodes, count)."""

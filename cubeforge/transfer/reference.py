@@ -20,7 +20,7 @@ FloatArray = npt.NDArray[np.float64]
 Cells = Callable[[int], npt.NDArray[np.floating]]
 
 
-def crossings(scene: Scene, x: float, y: float) -> Iterator[tuple[int, FloatArray, FloatArray]]:
+def crossings(scene: Scene, x: float, y: float) -> Iterator[tuple[int, npt.NDArray[np.int64], FloatArray]]:
     """Pieces of the ray through pixel coordinates (x, y), front to back.
 
     Yields
@@ -80,8 +80,10 @@ def march(scene: Scene, band: Band, cells_of: Cells, x: float, y: float, shifts:
             for line, shift in enumerate(shifts):
                 at = CELL_HEAD + CELL_LINE * line
                 inverse_b, kappa, emission = table[cell, at : at + CELL_LINE]
-                profile = inverse_b / np.sqrt(np.pi) * np.exp(
-                    -(((velocities - table[cell, 0] - shift) * inverse_b) ** 2)
+                profile = (
+                    inverse_b
+                    / np.sqrt(np.pi)
+                    * np.exp(-(((velocities - table[cell, 0] - shift) * inverse_b) ** 2))
                 )
                 depth += kappa * length * profile
                 energy += emission * length * profile
