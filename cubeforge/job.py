@@ -92,7 +92,7 @@ MomentumSource = Annotated[FieldOrConstant, _source("momentum density")]
 
 
 class Microturbulence(_Section):
-    """Width of unresolved motion, as exactly one of: dispersion sigma, b = sqrt(2) sigma, or full width at half maximum."""
+    """Width of unresolved motion: one of dispersion sigma, b = sqrt(2) sigma, full width at half maximum."""
 
     sigma: Velocity | None = None
     b: Velocity | None = None
