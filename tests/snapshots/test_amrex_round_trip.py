@@ -95,23 +95,31 @@ def test_bounds(tmp_path, version):
 
 
 @pytest.mark.parametrize("version", [1, 4])
-def test_long_boxes_are_cut(tmp_path, version):
-    shape = (130, 3, 70)
-    boxes = [([(0, 0, 0), (130, 0, 0)], [shape, (10, 3, 70)])]
-    mesh = build_hierarchy((0, 0, 0), (1, 1, 1), (140, 3, 70), [], boxes)
+@pytest.mark.parametrize(
+    ("shape", "parts"),
+    [
+        pytest.param((130, 3, 70), 3 * 2, id="pieces read by planes"),
+        pytest.param((700, 3, 5), 11, id="pieces so far apart that they are read by rows"),
+    ],
+)
+def test_long_boxes_are_cut(tmp_path, version, shape, parts):
+    nx, ny, nz = shape
+    boxes = [([(0, 0, 0), (nx, 0, 0)], [shape, (10, ny, nz)])]
+    mesh = build_hierarchy((0, 0, 0), (1, 1, 1), (nx + 10, ny, nz), [], boxes)
     rng = np.random.default_rng(1)
-    data = [{"density": rng.random(s)} for s in mesh.shape]
-    write_amrex(tmp_path / "plot", mesh, ["density"], data, ghost=2, version=version)
+    data = [{"density": rng.random(s), "Temp": rng.random(s)} for s in mesh.shape]
+    write_amrex(tmp_path / "plot", mesh, ["density", "Temp"], data, ghost=2, version=version)
     snapshot = open_snapshot(tmp_path / "plot")
     cut = snapshot.hierarchy
-    assert cut.patches == 3 * 2 + 2
+    assert cut.patches == parts + (2 if nz > 64 else 1)
     assert cut.shape.max() <= 64
-    together = np.full((140, 3, 70), np.nan)
-    for patch in range(cut.patches):
-        part = tuple(slice(a, b) for a, b in zip(cut.lo[patch], cut.hi[patch], strict=True))
-        together[part] = snapshot.read(patch, ["density"])["density"]
-    np.testing.assert_array_equal(together[:130], data[0]["density"])
-    np.testing.assert_array_equal(together[130:], data[1]["density"])
+    for field in ("density", "Temp"):
+        together = np.full((nx + 10, ny, nz), np.nan)
+        for patch in range(cut.patches):
+            part = tuple(slice(a, b) for a, b in zip(cut.lo[patch], cut.hi[patch], strict=True))
+            together[part] = snapshot.read(patch, ["density", "Temp"])[field]
+        np.testing.assert_array_equal(together[:nx], data[0][field])
+        np.testing.assert_array_equal(together[nx:], data[1][field])
 
 
 @pytest.fixture
