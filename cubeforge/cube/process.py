@@ -30,7 +30,8 @@ def machine() -> str:
 
 def new_run_id() -> str:
     """Name for one run: unique, and in the order of the runs' starts as far as clocks agree."""
-    return time.strftime("%Y%m%dT%H%M%S", time.gmtime()) + "-" + uuid.uuid4().hex[:8]
+    seconds, micro = divmod(time.time_ns() // 1000, 10**6)
+    return time.strftime("%Y%m%dT%H%M%S", time.gmtime(seconds)) + f"{micro:06d}-{uuid.uuid4().hex[:8]}"
 
 
 def _status(pid: int) -> list[str]:
