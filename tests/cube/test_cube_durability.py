@@ -62,7 +62,10 @@ def test_killed_writers_tear_nothing(tmp_path: Path, spec: CubeSpec) -> None:
         writer = subprocess.Popen(run, stdout=subprocess.PIPE, text=True)
         assert writer.stdout is not None
         assert writer.stdout.readline() == "writing\n"
-        time.sleep(rng.uniform(0.1, 0.4))
+        # A random while, and then the moment at which a temporary file is seen.
+        until = time.monotonic() + rng.uniform(0.1, 0.4)
+        while time.monotonic() < until or not any(cube.ledger.glob("partial-*/*")):
+            pass
         writer.send_signal(signal.SIGKILL)
         writer.wait()
         writer.stdout.close()
@@ -70,7 +73,7 @@ def test_killed_writers_tear_nothing(tmp_path: Path, spec: CubeSpec) -> None:
         assert len(list(cube.ledger.glob("lease-*"))) == 1
         outcome = verify(cube)
         assert outcome.sound, outcome
-        assert outcome.checked > 0
+    assert outcome.checked > 0
     # Also tiles that were stored and not yet recorded are whole.
     for tile in np.flatnonzero(cube.stored_tiles()):
         wanted = np.random.default_rng(tile).standard_normal((100, 64, 64)).astype("f4")
