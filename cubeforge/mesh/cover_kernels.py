@@ -47,6 +47,17 @@ def mark_covered(patches, level, lo, shape, scale, cell_lo, cell_scale, state): 
 
 
 @njit(nogil=True, cache=True)
+def _sort(values):  # type: ignore[no-untyped-def]
+    """Sort a few numbers in place, by insertion: numpy's sort takes seconds to compile."""
+    for i in range(1, len(values)):
+        value, j = values[i], i
+        while j > 0 and values[j - 1] > value:
+            values[j] = values[j - 1]
+            j -= 1
+        values[j] = value
+
+
+@njit(nogil=True, cache=True)
 def _open_part(low, high):  # type: ignore[no-untyped-def]
     """Fraction of the last box, which starts at 0, that the boxes before it leave open; exactly 0 if none.
 
@@ -56,7 +67,7 @@ def _open_part(low, high):  # type: ignore[no-untyped-def]
     for axis in range(3):
         edges[axis, : len(low)] = low[:, axis]
         edges[axis, len(low) :] = high[:, axis]
-        edges[axis] = np.sort(edges[axis])
+        _sort(edges[axis])
     volume = 0.0
     boxes = len(low) - 1
     for i in range(edges.shape[1] - 1):

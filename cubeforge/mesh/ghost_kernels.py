@@ -349,10 +349,11 @@ def finish(  # type: ignore[no-untyped-def]
                 s = slot[i, j, k]
                 if s < 0 or volume[s] == 0.0:
                     continue
-                rest = 0.0
-                if open_part.size > 0 and known[i, j, k]:
+                rest = heavy = 0.0
+                if open_part.size > 0 and known[i, j, k] and open_part[i, j, k] > 0.0:
+                    # not before: what a covered cell holds may be anything, and 0 x NaN is NaN
                     rest = open_part[i, j, k]
-                heavy = rest * values[weight, i, j, k] if weight >= 0 else rest
+                    heavy = rest * values[weight, i, j, k] if weight >= 0 else rest
                 for f in range(len(values)):
                     if rest > 0.0:
                         by_volume[s, f] += rest * (values[f, i, j, k] - reference[s, f])

@@ -46,10 +46,9 @@ def _lower(keys, first, last, value):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=True)
-def _collect(bin3, bin0, entry0, entry1, ids, lo, shape, width, q0, q1, found, n):  # type: ignore[no-untyped-def]
+def _collect(bin3, bin0, entries, lo, shape, width, q0, q1, found, n):  # type: ignore[no-untyped-def]
     """Append the patches of one bin that meet the box [q0, q1) and have not been met in an earlier bin."""
-    for entry in range(entry0, entry1):
-        patch = ids[entry]
+    for patch in entries:
         meets = True
         for axis in range(3):
             low = lo[patch, axis]
@@ -74,7 +73,7 @@ def _collect(bin3, bin0, entry0, entry1, ids, lo, shape, width, q0, q1, found, n
 def boxes_meeting(  # type: ignore[no-untyped-def]
     level0, level1, box_lo, box_hi, scale, lo, shape, width, bins, key_first, keys, start, ids
 ):
-    """Patches of levels ``level0 <= level < level1`` that meet a box, ascending.
+    """Patches of levels ``level0 <= level < level1`` that meet a box, in no order.
 
     box_lo, box_hi: (3,) int64 in finest units. scale, width, bins: (levels, 3) int64. lo, shape: (patches, 3)
     int32. Occupied bins of a level are ``keys[key_first[level]:key_first[level + 1]]``, sorted; the patches
@@ -102,31 +101,27 @@ def boxes_meeting(  # type: ignore[no-untyped-def]
         ny, nz = bins[level, 1], bins[level, 2]
         first = _lower(keys, first, last, (bin0[0] * ny + bin0[1]) * nz + bin0[2])
         last = _lower(keys, first, last, (bin1[0] * ny + bin1[1]) * nz + bin1[2] + 1)
-        if last - first <= (bin1[0] - bin0[0] + 1) * (bin1[1] - bin0[1] + 1):
-            # Fewer occupied bins than rows of bins: walk through them all.
-            for k in range(first, last):
-                bin3[2] = keys[k] % nz
-                bin3[1] = keys[k] // nz % ny
-                bin3[0] = keys[k] // nz // ny
+        across = bin1[1] - bin0[1] + 1
+        rows = (bin1[0] - bin0[0] + 1) * across
+        # Where fewer bins are occupied than there are rows of them, walk through all as if they were one row.
+        sparse = last - first <= rows
+        for row in range(1 if sparse else rows):
+            k, end = first, last
+            if not sparse:
+                key = ((bin0[0] + row // across) * ny + bin0[1] + row % across) * nz
+                k = _lower(keys, first, last, key + bin0[2])
+                end = _lower(keys, k, last, key + bin1[2] + 1)
+            for occupied in range(k, end):
+                bin3[0] = keys[occupied] // nz // ny
+                bin3[1] = keys[occupied] // nz % ny
+                bin3[2] = keys[occupied] % nz
                 inside = True
                 for axis in range(3):
                     inside = inside and bin0[axis] <= bin3[axis] <= bin1[axis]
                 if inside:
-                    found, n = _collect(
-                        bin3, bin0, start[k], start[k + 1], ids, lo, shape, width[level], q0, q1, found, n
-                    )
-            continue
-        for x in range(bin0[0], bin1[0] + 1):
-            for y in range(bin0[1], bin1[1] + 1):
-                row = (x * ny + y) * nz
-                k = _lower(keys, first, last, row + bin0[2])
-                while k < last and keys[k] <= row + bin1[2]:
-                    bin3[0], bin3[1], bin3[2] = x, y, keys[k] - row
-                    found, n = _collect(
-                        bin3, bin0, start[k], start[k + 1], ids, lo, shape, width[level], q0, q1, found, n
-                    )
-                    k += 1
-    return np.sort(found[:n])
+                    entries = ids[start[occupied] : start[occupied + 1]]
+                    found, n = _collect(bin3, bin0, entries, lo, shape, width[level], q0, q1, found, n)
+    return found[:n]
 
 
 @njit(nogil=True, cache=True)
@@ -156,7 +151,7 @@ def sky_bins(first, last, tier, tier_first, tier_columns, start, ids):  # type: 
 def rectangles_meeting(  # type: ignore[no-untyped-def]
     x0, x1, y0, y1, unit, rect_lo, rect_hi, first, tier_first, tier_columns, start, ids
 ):
-    """Rectangles (closed) that meet the half-open box [x0, x1) x [y0, y1) in pixels, ascending.
+    """Rectangles (closed) that meet the half-open box [x0, x1) x [y0, y1) in pixels, in no order.
 
     unit: (4,) int64, first and last unit bin that the box touches in x, then in y; rect_lo, rect_hi: (n, 2)
     float64; the rest as in `sky_bins`, with the bins' final starts.
@@ -181,4 +176,4 @@ def rectangles_meeting(  # type: ignore[no-untyped-def]
                         found = bigger
                     found[n] = r
                     n += 1
-    return np.sort(found[:n])
+    return found[:n]

@@ -106,6 +106,7 @@ class BoxIndex:
         scale = self._scale[level]
         low = np.asarray(lo, dtype=np.int64) * scale
         found: Ids = boxes_meeting(level0, level1, low, np.asarray(hi, dtype=np.int64) * scale, *self.tables)
+        found.sort()  # here and not in the kernel, whose compilation it would double
         return found
 
 
@@ -217,6 +218,7 @@ class SkyIndex:
         unit = np.array([x0 // bx, (x1 - 1) // bx, y0 // by, (y1 - 1) // by], dtype=np.int64)
         tables = (self._tier_first, self._tier_columns, self._start, self._ids)
         found: Ids = rectangles_meeting(x0, x1, y0, y1, unit, self._lo, self._hi, self._first, *tables)
+        found.sort()
         return found
 
     def counts(self) -> Ids:

@@ -108,6 +108,22 @@ def test_stale_covered_cells_beside_leaves_are_replaced():
     np.testing.assert_allclose(whole, truth, rtol=1e-12)
 
 
+def test_covered_cells_may_hold_anything_even_in_the_weight():
+    fields = {
+        "v": lambda x, y, z: np.sin(3 * x * y * z),
+        "rho": lambda x, y, z: np.exp(np.sin(7 * x * y + z)),
+    }
+    clean, dirty = Stored(NESTED, fields), Stored(NESTED, fields)
+    for patch, data in enumerate(dirty.data):
+        for values in data.values():
+            values[~leaf_mask(NESTED, patch)] = np.nan
+    for patch in range(NESTED.patches):
+        wanted = GhostFiller(NESTED, clean, weight="rho", whole=True).fill(patch, ["v", "rho"])
+        found = GhostFiller(NESTED, dirty, weight="rho", whole=True).fill(patch, ["v", "rho"])
+        for name, values in wanted.items():
+            np.testing.assert_array_equal(found[name], values)
+
+
 @pytest.mark.parametrize("periodic", [(False, False, False), (True, True, True)])
 def test_constants_come_out_bit_for_bit(periodic):
     stored = Stored(NESTED, {"f": lambda x, y, z: 0.1, "rho": lambda x, y, z: np.exp(np.sin(7 * x * y + z))})
