@@ -144,12 +144,12 @@ def compare(hierarchy: Hierarchy, seed: int, periodic: tuple[bool, bool, bool], 
 
 
 @given(hierarchies(), st.integers(0, 2**32 - 1), st.tuples(*[st.booleans()] * 3), st.booleans())
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 def test_ghosts_follow_the_rules_with_gaps(hierarchy, seed, periodic, whole):
     compare(hierarchy, seed, periodic, whole)
 
 
 @given(hierarchies(tiled=True), st.integers(0, 2**32 - 1), st.tuples(*[st.booleans()] * 3), st.booleans())
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 def test_ghosts_follow_the_rules_on_a_tiled_domain(hierarchy, seed, periodic, whole):
     compare(hierarchy, seed, periodic, whole)
