@@ -176,9 +176,9 @@ def background_brightness(spec: CubeSpec) -> float:
 def pieces(cube: Cube, tiles: npt.NDArray[np.integer[Any]]) -> Iterator[Piece]:
     """Read `tiles` one after the other; each in pieces of rows, so that copies of it stay small."""
     background = background_brightness(cube.spec)
-    for tile in tiles:
-        along_y, along_x = cube.spec.tile_slices(int(tile))
-        image = cube.read_intensity(int(tile))
+    for tile in map(int, tiles):
+        along_y, along_x = cube.spec.tile_slices(tile)
+        image = cube.read_intensity(tile)
         rows = max(1, PIECE // (image.shape[0] * image.shape[2]))
         for first in range(0, image.shape[1], rows):
             excess = image[:, first : first + rows].astype(np.float64)
@@ -336,9 +336,9 @@ def _map_means(cube: Cube, tiles: npt.NDArray[np.integer[Any]], grid: _Grid) -> 
     names = [name for name, _ in cube.spec.maps]
     sums = np.zeros((len(names), *grid.shape))
     counts = np.zeros(sums.shape, dtype=np.int64)
-    for tile in tiles if names else ():
-        along_y, along_x = cube.spec.tile_slices(int(tile))
-        values = cube.read_maps(int(tile))
+    for tile in map(int, tiles if names else ()):
+        along_y, along_x = cube.spec.tile_slices(tile)
+        values = cube.read_maps(tile)
         good = np.isfinite(values)
         piece = Piece(along_y, along_x, good, values)
         grid.add(sums, piece, np.where(good, values, 0.0), np.add)
