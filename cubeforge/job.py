@@ -304,7 +304,7 @@ class OutputSection(_Section):
     cube: str
     brightness: Literal["K", "Jy/sr", "Jy/pixel"] = "K"
     background: Literal["subtracted", "kept"] = "subtracted"
-    tile: Annotated[int, Field(ge=1, le=4096)] = 64
+    tile: Annotated[int, Field(ge=8, le=4096, multiple_of=8)] = 64
 
 
 class Job(_Section):

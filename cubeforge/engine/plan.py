@@ -15,7 +15,8 @@ from cubeforge.cube.spec import CubeSpec
 from cubeforge.engine.setup import Setup
 from cubeforge.errors import PlanError
 from cubeforge.quantities import show_bytes
-from cubeforge.transfer.march_kernels import BLOCK, CELL_HEAD, CELL_LINE
+from cubeforge.transfer.gather_kernels import CELL_HEAD, CELL_LINE
+from cubeforge.transfer.march_kernels import BLOCK
 
 NUMERICAL_VERSION = 1
 """Raised by every change of the code that changes pixels."""

@@ -20,6 +20,7 @@ from cubeforge.quantities import parse
 from cubeforge.snapshots import open_snapshot
 from cubeforge.snapshots.base import Snapshot
 from cubeforge.transfer.channels import Band, make_band
+from cubeforge.transfer.march_kernels import BLOCK
 from cubeforge.transfer.scene import Region, Scene, build_scene
 from cubeforge.transfer.view import View, covering_size, sky_basis
 
@@ -72,8 +73,9 @@ class Setup:
 
     @property
     def tile(self) -> int:
-        """Side of a tile in pixels; not larger than the image."""
-        return min(self.job.output.tile, max(self.view.nx, self.view.ny))
+        """Side of a tile in pixels; no larger than it takes to hold the image."""
+        whole = -(-max(self.view.nx, self.view.ny) // BLOCK) * BLOCK
+        return min(self.job.output.tile, whole)
 
     @cached_property
     def sky(self) -> SkyIndex:

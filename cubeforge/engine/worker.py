@@ -14,7 +14,8 @@ from cubeforge.engine.plan import Plan, entry_bytes, make_plan, tile_area
 from cubeforge.engine.setup import Setup
 from cubeforge.mesh.leaves import leaf_mask
 from cubeforge.quantities import planck, rayleigh_jeans_factor
-from cubeforge.transfer.march_kernels import BLOCK, STATISTICS, march_tile
+from cubeforge.transfer.gather_kernels import STATISTICS
+from cubeforge.transfer.march_kernels import BLOCK, march_tile
 from cubeforge.transfer.optical import LineCells, pack_cells
 from cubeforge.transfer.pointers import addresses
 from cubeforge.transfer.view import rays_per_pixel
@@ -153,7 +154,7 @@ class TileWorker:
             np.array(area, dtype=np.int64), self._rays(area, entries), scene.start, scene.step_x, scene.step_y,
             scene.direction, scene.box, scene.sphere, scene.cell, scene.lo[entries], scene.hi[entries],
             scene.level[entries], scene.scale, scene.rect[entries], addresses(patches), 1, np.zeros(1),
-            band.sampled(), band.weights, band.reach, band.cut, scene.longest, image, column, statistics,
+            band.nodes, band.weights, band.count, band.reach, band.cut, scene.longest, image, column, statistics,
         )  # fmt: skip
         return image, column
 

@@ -2,151 +2,34 @@
 
 from __future__ import annotations
 
-import math
 from typing import Any
 
 import numpy as np
-from numba import carray, float32, njit
+from numba import njit
 
-from cubeforge.transfer.line_kernels import (
-    FOLD,
-    add_line,
-    fold,
-    line_any,
-    line_moderate,
-    line_thin,
-    outside_share,
-    transfer_sum,
-    window,
+from cubeforge.transfer.channel_kernels import ROW, STEP
+from cubeforge.transfer.gather_kernels import RAYS, gather
+from cubeforge.transfer.packet_kernels import (
+    CAPACITY,
+    apply_rows,
+    can_reach,
+    compact,
+    fold_touched,
+    level_target,
+    pack_rows,
+    safe_target,
 )
-from cubeforge.transfer.pointers import as_float32_pointer
-from cubeforge.transfer.ray_kernels import clip_to_region, inverse_of, overlay, trace
+from cubeforge.transfer.ray_kernels import clip_to_region, inverse_of, overlay
+from cubeforge.transfer.vectors import LANES, flush_denormals, restore_denormals
 
 _opts = {"nogil": True, "cache": True, "error_model": "numpy"}
 Array = Any
 
-CELL_HEAD = 2
-"""Numbers at the head of a cell: line-of-sight velocity, mass density."""
-CELL_LINE = 3
-"""Numbers for each line in a cell: inverse width, opacity, emission above the background."""
 BLOCK = 8
-"""Pixels a side of the blocks that share one list of candidate patches."""
-
-RAYS, CROSSINGS, EMISSION, OUTSIDE, INVERTED = range(5)
-STATISTICS = ("rays", "crossings", "emission", "emission_outside", "inverted_crossings")
-"""What a march counts; emission is the optically thin, velocity-integrated one."""
-
-_PER_SQRT_PI = 1.0 / math.sqrt(math.pi)
-
-
-@njit(**_opts)
-def cross_single(cell: Array, at: int, length: float, nodes: Array, reach: float, cut: float, state: Array,
-                 sums: Array) -> tuple[int, int]:  # fmt: skip
-    """Apply one crossing with a single line; returns the channels touched."""
-    v = cell[at]
-    inv_b = cell[at + 2]
-    peak = float32(length * inv_b * _PER_SQRT_PI)
-    tau = cell[at + 3] * peak
-    energy = cell[at + 4] * peak
-    if tau == 0.0 and energy == 0.0:
-        return 0, 0
-    half = (cut if tau <= 1.0 else math.sqrt(math.log(tau) + cut * cut)) / inv_b
-    channels = nodes.shape[1]
-    k0, k1 = window(v + 0.5 * (channels - 1), half, reach, channels)
-    size = abs(tau)
-    for node in range(nodes.shape[0]):
-        u = nodes[node, k0:k1]
-        bright = state[0, node, k0:k1]
-        lost = state[1, node, k0:k1]
-        if size < 0.05:
-            line_thin(u, v, inv_b, tau, energy, bright, lost)
-        elif size < 1.0:
-            line_moderate(u, v, inv_b, tau, energy, bright, lost)
-        else:
-            line_any(u, v, inv_b, max(tau, float32(-10.0)), energy, bright, lost)
-    return k0, k1
-
-
-@njit(**_opts)
-def cross_blend(cell: Array, at: int, lines: int, shifts: Array, length: float, nodes: Array, reach: float,
-                cut: float, state: Array, sums: Array) -> tuple[int, int]:  # fmt: skip
-    """Apply one crossing with several lines, summing their opacity and emission before the light passes."""
-    channels = nodes.shape[1]
-    low, high = channels, 0
-    for line in range(lines):
-        v = cell[at] + shifts[line]
-        inv_b = cell[at + 2 + 3 * line]
-        peak = float32(length * inv_b * _PER_SQRT_PI)
-        tau = cell[at + 3 + 3 * line] * peak
-        energy = cell[at + 4 + 3 * line] * peak
-        if tau == 0.0 and energy == 0.0:
-            continue
-        half = (cut if tau <= 1.0 else math.sqrt(math.log(tau) + cut * cut)) / inv_b
-        k0, k1 = window(v + 0.5 * (channels - 1), half, reach, channels)
-        if k1 <= k0:
-            continue
-        low = min(low, k0)
-        high = max(high, k1)
-        for node in range(nodes.shape[0]):
-            add_line(nodes[node, k0:k1], v, inv_b, tau, energy, sums[0, node, k0:k1], sums[1, node, k0:k1])
-    if high <= low:
-        return 0, 0
-    for node in range(nodes.shape[0]):
-        transfer_sum(sums[0, node, low:high], sums[1, node, low:high], state[0, node, low:high],
-                     state[1, node, low:high])  # fmt: skip
-    return low, high
-
-
-@njit(**_opts)
-def count_crossing(cell: Array, at: int, lines: int, shifts: Array, length: float, channels: int,
-                   statistics: Array) -> None:  # fmt: skip
-    """Book the thin emission of a crossing, the part outside the band, and inverted gas."""
-    for line in range(lines):
-        kappa = cell[at + 3 + 3 * line]
-        emitted = abs(cell[at + 4 + 3 * line]) * length
-        statistics[EMISSION] += emitted
-        v = cell[at] + shifts[line] + 0.5 * (channels - 1)
-        statistics[OUTSIDE] += emitted * outside_share(v, cell[at + 2 + 3 * line], channels)
-        if kappa < 0.0:
-            statistics[INVERTED] += 1.0
-
-
-@njit(**_opts)
-def march_ray(origin: Array, direction: Array, inverse: Array, n_pieces: int, piece_start: Array,
-              piece_stop: Array, piece_patch: Array, lo: Array, hi: Array, level: Array, scale: Array,
-              address: Array, lines: int, shifts: Array, nodes: Array, reach: float, cut: float, state: Array,
-              sums: Array, folded: Array, cells: Array, lengths: Array, statistics: Array) -> float:  # fmt: skip
-    """March one ray through its pieces; leaves intensity and transmission in `folded`, returns the mass column."""
-    width = CELL_HEAD + CELL_LINE * lines
-    channels = nodes.shape[1]
-    count = 0
-    column = 0.0
-    touched_low, touched_high = channels, 0
-    for piece in range(n_pieces):
-        p = piece_patch[piece]
-        n = trace(origin, direction, inverse, piece_start[piece], piece_stop[piece], lo[p], hi[p],
-                  scale[level[p]], cells, lengths)  # fmt: skip
-        size = (hi[p, 0] - lo[p, 0]) * (hi[p, 1] - lo[p, 1]) * (hi[p, 2] - lo[p, 2])
-        cell = carray(as_float32_pointer(address[p]), (size * width,))
-        for i in range(n):
-            at = cells[i] * width
-            column += cell[at + 1] * lengths[i]
-            count_crossing(cell, at, lines, shifts, lengths[i], channels, statistics)
-            if lines == 1:
-                k0, k1 = cross_single(cell, at, lengths[i], nodes, reach, cut, state, sums)
-            else:
-                k0, k1 = cross_blend(cell, at, lines, shifts, lengths[i], nodes, reach, cut, state, sums)
-            if k1 > k0:
-                touched_low = min(touched_low, k0)
-                touched_high = max(touched_high, k1)
-            count += 1
-            if count % FOLD == 0 and touched_high > touched_low:
-                fold(touched_low, touched_high, state[0], state[1], folded[0], folded[1])
-                touched_low, touched_high = channels, 0
-    if touched_high > touched_low:
-        fold(touched_low, touched_high, state[0], state[1], folded[0], folded[1])
-    statistics[CROSSINGS] += count
-    return column
+"""Pixels a side of the blocks that share one list of candidate patches; a tile is a whole number of them, except at
+the image's far edges."""
+PACKET_SIDE = 4
+"""Pixels a side of the smaller blocks whose rays make up packets."""
 
 
 @njit(**_opts)
@@ -161,9 +44,78 @@ def block_candidates(rect: Array, x0: int, x1: int, y0: int, y1: int, out: Array
 
 
 @njit(**_opts)
+def list_rays(x0: int, x1: int, y0: int, y1: int, tile: Array, rays_per_side: Array, places: Array,
+              pixels: Array) -> int:  # fmt: skip
+    """Sub-rays of a small block in canonical order: where each is, in pixels, and which pixel it belongs to."""
+    n = 0
+    for y in range(y0, y1):
+        for x in range(x0, x1):
+            side = rays_per_side[y - tile[2], x - tile[0]]
+            for sub in range(side * side):
+                places[n, 0] = x + (sub % side + 0.5) / side
+                places[n, 1] = y + (sub // side + 0.5) / side
+                pixels[n, 0] = x - tile[0]
+                pixels[n, 1] = y - tile[2]
+                n += 1
+    return n
+
+
+@njit(**_opts)
+def march_packet(rays: int, origins: Array, direction: Array, inverse: Array, box: Array, sphere: Array,
+                 cell_size: Array, lo: Array, hi: Array, level: Array, scale: Array, address: Array,
+                 candidates: Array, n_candidates: int, lines: int, shifts: Array, offsets_first: Array,
+                 channels: int, reach: float, cut: float, start: Array, stop: Array, patch: Array, pieces: Array,
+                 progress: Array, cells: Array, ends: Array, offsets: Array, values: Array, windows: Array,
+                 far: Array, rows: Array, row_windows: Array, state: Array, sums: Array, folded: Array,
+                 columns: Array, statistics: Array) -> None:  # fmt: skip
+    """March up to sixteen rays together; leaves intensities in `folded` and mass columns in `columns`."""
+    taken, filled = np.zeros(LANES, dtype=np.int64), np.zeros(LANES, dtype=np.int64)
+    finished = np.ones(LANES, dtype=np.bool_)
+    touched = np.array([channels, 0])
+    for lane in range(rays):
+        columns[lane] = 0.0
+        near, end = clip_to_region(origins[lane], direction, inverse, box, sphere, cell_size)
+        pieces[lane] = 0
+        progress[lane, :] = 0
+        if near < end:
+            pieces[lane] = overlay(origins[lane], direction, inverse, near, end, lo, hi, level, scale, candidates,
+                                   n_candidates, start[lane], stop[lane], patch[lane])  # fmt: skip
+        finished[lane] = pieces[lane] == 0
+    done = 0
+    while True:
+        for lane in range(rays):
+            if not finished[lane]:
+                filled[lane], more = gather(
+                    origins[lane], direction, inverse, pieces[lane], progress[lane], start[lane, 0], stop[lane, 0],
+                    patch[lane, 0], lo, hi, level, scale, address, lines, shifts, channels, reach, cut, cells, ends,
+                    offsets, values[lane], windows[lane], far[lane], filled[lane], statistics,
+                )  # fmt: skip
+                columns[lane] += more
+                finished[lane] = progress[lane, 0] == pieces[lane]
+        moved = False
+        while True:
+            target = level_target(far, taken, filled)
+            if not can_reach(target, far, taken, filled, finished):
+                if moved:
+                    break
+                # A full buffer that its neighbours' long crossings outrun: go as far as it goes.
+                target = safe_target(far, filled, finished)
+            count = pack_rows(target, lines, values, windows, far, taken, filled, rows, row_windows)
+            if count == 0:
+                break
+            done = apply_rows(count, done, touched, rows, row_windows, lines, offsets_first, channels, state, sums,
+                              folded)  # fmt: skip
+            moved = True
+        if finished.all() and (taken == filled).all():
+            break
+        compact(values, windows, far, taken, filled)
+    fold_touched(touched, channels, offsets_first.shape[0], state, folded)
+
+
+@njit(**_opts)
 def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, step_y: Array, direction: Array,
                box: Array, sphere: Array, cell_size: Array, lo: Array, hi: Array, level: Array, scale: Array,
-               rect: Array, address: Array, lines: int, shifts: Array, nodes: Array, weights: Array,
+               rect: Array, address: Array, lines: int, shifts: Array, nodes: Array, weights: Array, channels: int,
                reach: float, cut: float, longest: int, image: Array, column: Array,
                statistics: Array) -> None:  # fmt: skip
     """March all rays of one tile.
@@ -171,7 +123,8 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     Parameters
     ----------
     tile : int64, shape (4,)
-        ``x0, x1, y0, y1``: the tile's pixels, half open.
+        ``x0, x1, y0, y1``: the tile's pixels, half open; x0 and y0 are multiples of BLOCK, x1 and y1 too unless the
+        image ends there.
     rays_per_side : int32, shape (y, x)
         Each pixel gets this number squared of sub-rays, on a square lattice.
     start, step_x, step_y : float64, shape (3,)
@@ -185,13 +138,12 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     rect : float64, shape (patches, 4)
         Each patch's rectangle on the sky in pixels: x low, x high, y low, y high.
     address : int64, shape (patches,)
-        Where each patch's cells are: float32, C order, ``2 + 3 * lines`` numbers a cell (see CELL_HEAD).
-        Velocities are in channels from the middle of the band, widths in channels; opacity and emission are
-        integrated over velocity, per unit of depth; density in g/cm2 per unit of depth.
+        Where each patch's cells are: float32, C order; see `gather_kernels` for a cell's numbers.
     lines, shifts : int; float64, shape (lines,)
         Lines a cell holds, and the velocity of each against the first, in channels.
-    nodes, weights : float32, shape (nodes, channels); float64, shape (nodes,)
-        Velocities sampled, in channels from the middle of the band; their weights in the channel's mean.
+    nodes, weights : float64, shape (n,)
+        Velocities sampled in each channel, in channels from its centre, and their weights in its mean.
+    channels : int
     reach : float
         Largest distance of a node from its channel's centre.
     cut : float
@@ -202,55 +154,65 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
         Brightness above the background, mean over the pixel.
     column : float64, shape (y, x), out
         Mean mass column, g/cm2.
-    statistics : float64, shape (len(STATISTICS),), out
+    statistics : float64, shape (len(gather_kernels.STATISTICS),), out
         Added to.
     """
-    channels = nodes.shape[1]
-    n_nodes = nodes.shape[0]
+    before = flush_denormals()
     inverse = inverse_of(direction)
-    state = np.zeros((2, n_nodes, channels), dtype=np.float32)
-    sums = np.zeros((2, n_nodes, channels), dtype=np.float32)
-    folded = np.zeros((2, n_nodes, channels))
-    pixel = np.zeros(channels)
-    cells = np.empty(longest + 1, dtype=np.int64)
-    lengths = np.empty(longest + 1)
+    n_nodes = nodes.shape[0]
+    # Rows hold velocities from the middle of the band, where float32 is finest.
+    offsets_first = (nodes - 0.5 * (channels - 1)).astype(np.float32)
+    state = np.zeros(n_nodes * channels * STEP, dtype=np.float32)
+    sums = np.zeros(n_nodes * channels * STEP if lines > 1 else STEP, dtype=np.float32)
+    folded = np.zeros(n_nodes * channels * STEP)
+    values = np.empty((LANES, CAPACITY, lines * ROW), dtype=np.float32)
+    windows = np.empty((LANES, CAPACITY, 2 * lines), dtype=np.int32)
+    far = np.empty((LANES, CAPACITY))
+    rows = np.empty(CAPACITY * lines * ROW * LANES, dtype=np.float32)
+    row_windows = np.empty((CAPACITY, 2 * lines), dtype=np.int32)
+    cells, ends, offsets = np.empty(longest, dtype=np.int64), np.empty(longest + 1), np.empty((longest, 3))
     candidates = np.empty(rect.shape[0], dtype=np.int32)
-    piece_start = np.empty((3, 2 * rect.shape[0] + 1))
-    piece_stop = np.empty((3, 2 * rect.shape[0] + 1))
-    piece_patch = np.empty((3, 2 * rect.shape[0] + 1), dtype=np.int32)
-    origin = np.empty(3)
-    x_first, x_last, y_first, y_last = tile
-    # Blocks lie on a lattice of absolute pixels.
-    for by in range(y_first // BLOCK, (y_last - 1) // BLOCK + 1):
-        for bx in range(x_first // BLOCK, (x_last - 1) // BLOCK + 1):
-            x0, x1 = max(bx * BLOCK, x_first), min(bx * BLOCK + BLOCK, x_last)
-            y0, y1 = max(by * BLOCK, y_first), min(by * BLOCK + BLOCK, y_last)
+    most_pieces = 2 * rect.shape[0] + 1
+    piece_start, piece_stop = np.empty((LANES, 3, most_pieces)), np.empty((LANES, 3, most_pieces))
+    piece_patch = np.empty((LANES, 3, most_pieces), dtype=np.int32)
+    pieces, progress = np.empty(LANES, dtype=np.int64), np.empty((LANES, 2), dtype=np.int64)
+    side = rays_per_side.max()
+    places, pixels = (
+        np.empty((PACKET_SIDE * PACKET_SIDE * side * side, 2)),
+        np.empty((PACKET_SIDE * PACKET_SIDE * side * side, 2), dtype=np.int64),
+    )
+    origins, columns = np.empty((LANES, 3)), np.empty(LANES)
+    pixel_sums = np.zeros((PACKET_SIDE, PACKET_SIDE, channels))
+    for y0 in range(tile[2], tile[3], PACKET_SIDE):
+        for x0 in range(tile[0], tile[1], PACKET_SIDE):
+            x1, y1 = min(x0 + PACKET_SIDE, tile[1]), min(y0 + PACKET_SIDE, tile[3])
             n_candidates = block_candidates(rect, x0, x1, y0, y1, candidates)
+            n_rays = list_rays(x0, x1, y0, y1, tile, rays_per_side, places, pixels)
+            statistics[RAYS] += n_rays
+            pixel_sums[:] = 0.0
+            for first in range(0, n_rays, LANES):
+                rays = min(LANES, n_rays - first)
+                for lane in range(rays):
+                    for axis in range(3):
+                        origins[lane, axis] = (start[axis] + places[first + lane, 0] * step_x[axis]
+                                               + places[first + lane, 1] * step_y[axis])  # fmt: skip
+                for at in range(0, n_nodes * channels * STEP, STEP):
+                    folded[at : at + LANES] = 0.0
+                    folded[at + LANES : at + STEP] = 1.0
+                march_packet(rays, origins, direction, inverse, box, sphere, cell_size, lo, hi, level, scale, address,
+                             candidates, n_candidates, lines, shifts, offsets_first, channels, reach, cut, piece_start,
+                             piece_stop, piece_patch, pieces, progress, cells, ends, offsets, values, windows, far,
+                             rows, row_windows, state, sums, folded, columns, statistics)  # fmt: skip
+                for lane in range(rays):
+                    px, py = pixels[first + lane]
+                    share = 1.0 / rays_per_side[py, px] ** 2
+                    column[py, px] += share * columns[lane]
+                    into = pixel_sums[py + tile[2] - y0, px + tile[0] - x0]
+                    for node in range(n_nodes):
+                        for k in range(channels):
+                            into[k] += share * weights[node] * folded[(node * channels + k) * STEP + lane]
             for y in range(y0, y1):
                 for x in range(x0, x1):
-                    side = rays_per_side[y - y_first, x - x_first]
-                    pixel[:] = 0.0
-                    mass = 0.0
-                    for sub in range(side * side):
-                        px = x + (sub % side + 0.5) / side
-                        py = y + (sub // side + 0.5) / side
-                        for axis in range(3):
-                            origin[axis] = start[axis] + px * step_x[axis] + py * step_y[axis]
-                        t_lo, t_hi = clip_to_region(origin, direction, inverse, box, sphere, cell_size)
-                        statistics[RAYS] += 1.0
-                        if not t_lo < t_hi:
-                            continue
-                        n = overlay(origin, direction, inverse, t_lo, t_hi, lo, hi, level, scale, candidates,
-                                    n_candidates, piece_start, piece_stop, piece_patch)  # fmt: skip
-                        folded[0] = 0.0
-                        folded[1] = 1.0
-                        mass += march_ray(origin, direction, inverse, n, piece_start[0], piece_stop[0],
-                                          piece_patch[0], lo, hi, level, scale, address, lines, shifts, nodes,
-                                          reach, cut, state, sums, folded, cells, lengths,
-                                          statistics)  # fmt: skip
-                        for node in range(n_nodes):
-                            for k in range(channels):
-                                pixel[k] += weights[node] * folded[0, node, k]
                     for k in range(channels):
-                        image[k, y - y_first, x - x_first] = pixel[k] / (side * side)
-                    column[y - y_first, x - x_first] = mass / (side * side)
+                        image[k, y - tile[2], x - tile[0]] = pixel_sums[y - y0, x - x0, k]
+    restore_denormals(before)

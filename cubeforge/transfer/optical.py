@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from cubeforge.transfer.channels import Band
-from cubeforge.transfer.march_kernels import CELL_HEAD, CELL_LINE
+from cubeforge.transfer.gather_kernels import CELL_HEAD, CELL_LINE
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -46,7 +46,7 @@ class LineCells:
 def pack_cells(
     density: FloatArray, velocity: FloatArray, lines: Sequence[LineMedium], band: Band, unit_cm: float
 ) -> npt.NDArray[np.float32]:
-    """Write a patch as the march reads it; see `march_kernels.march_tile` for the layout.
+    """Write a patch as the march reads it; see `gather_kernels` for the layout.
 
     Parameters
     ----------
@@ -61,12 +61,13 @@ def pack_cells(
 
     Returns
     -------
-    ndarray, shape (nx, ny, nz, 2 + 3 * len(lines)), float32
+    ndarray, shape (nx, ny, nz, CELL_HEAD + CELL_LINE * len(lines)), float32
     """
     out = np.empty((*density.shape, CELL_HEAD + CELL_LINE * len(lines)), dtype=np.float32)
     per_depth = unit_cm / band.width
     out[..., 0] = (velocity - band.middle) / band.width
-    out[..., 1] = density * unit_cm
+    out[..., 1:4] = 0.0
+    out[..., 4] = density * unit_cm
     for index, line in enumerate(lines):
         at = CELL_HEAD + CELL_LINE * index
         out[..., at] = band.width / line.b

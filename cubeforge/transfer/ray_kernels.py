@@ -158,58 +158,74 @@ def start_index(t: float, o: float, d: float, step: float, shift: float, lo: int
 
 @njit(**_opts)
 def trace(origin: Array, direction: Array, inverse: Array, t0: float, t1: float, lo: Array, hi: Array,
-          scale: Array, cells: Array, lengths: Array) -> int:  # fmt: skip
+          scale: Array, cells: Array, ends: Array, offsets: Array) -> int:  # fmt: skip
     """Cells of one patch that a ray crosses between depths `t0` and `t1` (after Amanatides & Woo 1987).
 
     Parameters
     ----------
     lo, hi, scale : int64, shape (3,)
         The patch's corners in its level's index space; finest units per cell.
-    cells : int64, out
+    cells : int64, shape (n,), out
         Flat index of each cell crossed, in the patch's C order (x, y, z).
-    lengths : float64, out
-        Length of each crossing, in the unit of `t`. Both want ``sum(hi - lo) + 1`` places.
+    ends : float64, shape (n + 1,), out
+        Depths: crossing i reaches from ``ends[i]`` to ``ends[i + 1]``.
+    offsets : float64, shape (n, 3), out
+        Middle of each crossing from its cell's centre, in cells.
+        All want ``sum(hi - lo) + 1`` places, `ends` one more.
 
     Returns
     -------
     int
         Number of crossings; all have a positive length.
     """
+    dx, dy, dz = direction[0], direction[1], direction[2]
     sx, sy, sz = scale[0] * inverse[0], scale[1] * inverse[1], scale[2] * inverse[2]
     bx, by, bz = -origin[0] * inverse[0], -origin[1] * inverse[1], -origin[2] * inverse[2]
-    ix = start_index(t0, origin[0], direction[0], sx, bx, lo[0], hi[0], scale[0])
-    iy = start_index(t0, origin[1], direction[1], sy, by, lo[1], hi[1], scale[1])
-    iz = start_index(t0, origin[2], direction[2], sz, bz, lo[2], hi[2], scale[2])
-    dx, dy, dz = direction[0], direction[1], direction[2]
-    stride_x = (hi[1] - lo[1]) * (hi[2] - lo[2])
+    ix = start_index(t0, origin[0], dx, sx, bx, lo[0], hi[0], scale[0])
+    iy = start_index(t0, origin[1], dy, sy, by, lo[1], hi[1], scale[1])
+    iz = start_index(t0, origin[2], dz, sz, bz, lo[2], hi[2], scale[2])
     stride_y = hi[2] - lo[2]
+    stride_x = (hi[1] - lo[1]) * stride_y
+    step_x, step_y, step_z = 1 if dx > 0.0 else -1, 1 if dy > 0.0 else -1, 1 if dz > 0.0 else -1
     tx = (ix + (dx > 0.0)) * sx + bx if dx != 0.0 else math.inf
     ty = (iy + (dy > 0.0)) * sy + by if dy != 0.0 else math.inf
     tz = (iz + (dz > 0.0)) * sz + bz if dz != 0.0 else math.inf
+    # Position in cells, less one half: the offset from a cell's centre is this minus the cell's index.
+    px, py, pz = origin[0] / scale[0] - 0.5, origin[1] / scale[1] - 0.5, origin[2] / scale[2] - 0.5
+    vx, vy, vz = dx / scale[0], dy / scale[1], dz / scale[2]
+    cell = (ix - lo[0]) * stride_x + (iy - lo[1]) * stride_y + (iz - lo[2])
     t = t0
+    ends[0] = t
     n = 0
     while True:
         face = min(tx, min(ty, tz))
         end = min(face, t1)
         if end > t:
-            cells[n] = (ix - lo[0]) * stride_x + (iy - lo[1]) * stride_y + (iz - lo[2])
-            lengths[n] = end - t
+            middle = 0.5 * (t + end)
+            cells[n] = cell
+            offsets[n, 0] = px + vx * middle - ix
+            offsets[n, 1] = py + vy * middle - iy
+            offsets[n, 2] = pz + vz * middle - iz
             n += 1
             t = end
+            ends[n] = t
         if face >= t1:
             return n
         if tx == face:
-            ix += 1 if dx > 0.0 else -1
+            ix += step_x
+            cell += step_x * stride_x
             if ix < lo[0] or ix >= hi[0]:
                 return n
             tx = (ix + (dx > 0.0)) * sx + bx
         if ty == face:
-            iy += 1 if dy > 0.0 else -1
+            iy += step_y
+            cell += step_y * stride_y
             if iy < lo[1] or iy >= hi[1]:
                 return n
             ty = (iy + (dy > 0.0)) * sy + by
         if tz == face:
-            iz += 1 if dz > 0.0 else -1
+            iz += step_z
+            cell += step_z
             if iz < lo[2] or iz >= hi[2]:
                 return n
             tz = (iz + (dz > 0.0)) * sz + bz

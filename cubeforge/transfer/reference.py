@@ -12,7 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from cubeforge.transfer.channels import Band
-from cubeforge.transfer.march_kernels import CELL_HEAD, CELL_LINE
+from cubeforge.transfer.gather_kernels import CELL_HEAD, CELL_LINE
 from cubeforge.transfer.ray_kernels import clip_to_region, inverse_of, overlay, trace
 from cubeforge.transfer.scene import Scene
 
@@ -44,14 +44,15 @@ def crossings(scene: Scene, x: float, y: float) -> Iterator[tuple[int, npt.NDArr
         origin, scene.direction, inverse, near, far, scene.lo, scene.hi, scene.level, scene.scale,
         np.arange(n, dtype=np.int32), n, start, stop, patch,
     )  # fmt: skip
-    cells, lengths = np.empty(scene.longest + 1, dtype=np.int64), np.empty(scene.longest + 1)
+    cells, ends = np.empty(scene.longest, dtype=np.int64), np.empty(scene.longest + 1)
+    offsets = np.empty((scene.longest, 3))
     for piece in range(pieces):
         entry = int(patch[0, piece])
         count = trace(
             origin, scene.direction, inverse, start[0, piece], stop[0, piece], scene.lo[entry], scene.hi[entry],
-            scene.scale[scene.level[entry]], cells, lengths,
+            scene.scale[scene.level[entry]], cells, ends, offsets,
         )  # fmt: skip
-        yield entry, cells[:count].copy(), lengths[:count].copy()
+        yield entry, cells[:count].copy(), np.diff(ends[: count + 1])
 
 
 def march(scene: Scene, band: Band, cells_of: Cells, x: float, y: float, shifts: FloatArray) -> FloatArray:
