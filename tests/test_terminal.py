@@ -170,6 +170,15 @@ def test_everything_goes_to_stderr(capsys: pytest.CaptureFixture[str]) -> None:
     assert captured.err.startswith("Plan\n  tiles  400\n120 of 400 tiles (30 %)")
 
 
+def test_results_printed_beside_a_bar_stay_on_stdout(capsys: pytest.CaptureFixture[str]) -> None:
+    console, written = screen(is_terminal=True)
+    with ProgressLine(console=console) as line:
+        line.update(Tiles(120))
+        print("result")
+    assert capsys.readouterr().out == "result\n"
+    assert "result" not in written.getvalue()
+
+
 def test_dumb_terminals_get_plain_lines(monkeypatch: pytest.MonkeyPatch) -> None:
     written = StringIO()
     monkeypatch.setattr(written, "isatty", lambda: True, raising=False)

@@ -48,6 +48,13 @@ def test_moments_of_gaussian_lines_are_the_closed_forms(store_cube: Store) -> No
     assert summary.background == 0.0
 
 
+def test_velocities_are_those_of_the_band(store_cube: Store) -> None:
+    lines, _, velocity = rotating()
+    summary = summarise(store_cube(lines, velocity_start=85.0e5))
+    # The same channels, which begin at 85 km/s and not at -2 km/s.
+    np.testing.assert_allclose(summary.moment1, velocity + 87.0, atol=2e-6)
+
+
 @pytest.mark.parametrize("tile", [(1, 37), (5, 8), (16, 16), (64, 64)])
 @pytest.mark.parametrize("max_side", [1000, 13, 1])
 def test_tiles_and_pieces_do_not_matter(
@@ -109,8 +116,11 @@ def test_background_in_kelvins_is_below_its_temperature(store_cube: Store) -> No
 def test_empty_sky_of_an_absolute_cube_has_no_velocity(store_cube: Store) -> None:
     cube = store_cube(np.ones((41, 3, 3)), absolute=True)
     level = np.float32(background_brightness(cube.spec))
-    summary = summarise(store_cube(np.full((41, 3, 3), level), absolute=True, name="sky"))
     # What rounding to float32 leaves is not zero, and has a sign; it must not count as emission.
+    levels = np.array([np.nextafter(level, np.float32(end)) for end in (0.0, level, np.inf)])
+    sky = store_cube(np.broadcast_to(levels, (41, 1, 3)), absolute=True, name="sky")
+    summary = summarise(sky)
+    assert summary.moment0.max() > 0.0
     assert np.all(np.abs(summary.moment0) < 1e-6)
     assert np.isnan(summary.moment1).all()
 

@@ -104,6 +104,8 @@ def test_what_is_written_on_it(store_cube: Store) -> None:
         "unfinished: 3 of 4 tiles are done",
     ):
         assert wanted in words
+    # A dollar in a name is a dollar.
+    assert not any(text.get_parse_math() for text in figure.texts)
     assert axes["moment0-bar"].get_ylabel() == "10⁶ Jy/sr km/s"
     assert axes["moment1-bar"].get_ylabel() == "km/s"
     assert axes["column-bar"].get_ylabel() == "g cm⁻²"
