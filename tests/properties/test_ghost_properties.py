@@ -56,9 +56,7 @@ class Slow:
         if not samples:
             return None
         weights = np.array([sample["rho"] for sample in samples])
-        means = {
-            name: float(np.average([s[name] for s in samples], weights=weights)) for name in samples[0]
-        }
+        means = {name: float(np.average([s[name] for s in samples], weights=weights)) for name in samples[0]}
         return means | {name: float(np.mean([s[name] for s in samples])) for name in ("rho", "m")}
 
     def from_coarser(self, level: int, cell: tuple[int, ...]) -> dict[str, float] | None:
