@@ -50,7 +50,7 @@ def inspect(snapshot: Path, as_json: bool) -> None:
     if as_json:
         click.echo(json.dumps(asdict(summary)))
         return
-    from cubeforge.terminal import show_snapshot
+    from cubeforge.terminal_pages import show_snapshot
 
     show_snapshot(summary)
 
@@ -69,7 +69,7 @@ def plan(job: Path, as_json: bool, threads: int) -> None:
     if as_json:
         click.echo(json.dumps(planned.summary() | {"least_memory": planned.least_memory(threads)}))
         return
-    from cubeforge.terminal import show_plan
+    from cubeforge.terminal_pages import show_plan
 
     show_plan(planned, threads)
 
@@ -100,7 +100,8 @@ def render(job: Path, workers: int, threads: int, memory: int | None, scheduler_
     """Render a JOB file into its cube; the same command goes on after an interruption."""
     from cubeforge.engine.render import render as run
     from cubeforge.job import load_job
-    from cubeforge.terminal import ProgressLine, show_outcome
+    from cubeforge.terminal import ProgressLine
+    from cubeforge.terminal_pages import show_outcome
 
     loaded = load_job(job)
     try:

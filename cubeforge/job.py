@@ -298,6 +298,13 @@ class RaySection(_Section):
     most: Annotated[int, Field(ge=1, le=256)] = 16
 
 
+class MarchSection(_Section):
+    """How the velocity varies inside a cell: evenly, with limited slopes, or not at all."""
+
+    reconstruction: Literal["linear", "constant"] = "constant"
+    limiter: Literal["monotonised central", "minmod"] = "monotonised central"
+
+
 class OutputSection(_Section):
     """The cube."""
 
@@ -318,6 +325,7 @@ class Job(_Section):
     output: OutputSection
     region: RegionSection = RegionSection()
     rays: RaySection = RaySection()
+    march: MarchSection = MarchSection()
     folder: str = Field(default=".", exclude=True)
     raw: dict[str, Any] = Field(default_factory=dict, exclude=True)
 

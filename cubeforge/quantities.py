@@ -24,6 +24,8 @@ M_H = float((1.00782503223 * _c.u).cgs.value)
 """Mass of a hydrogen atom, g (1.00782503223 u: AME2016, Wang et al. 2017)."""
 ATOMIC_MASS = float(_c.u.cgs.value)
 """Unified atomic mass unit, g."""
+JANSKY = 1e-23
+"""One jansky in erg / (s cm2 Hz)."""
 KM_S = 1e5
 """One km/s in cm/s."""
 

@@ -1,4 +1,4 @@
-"""What the command line shows on a terminal, or in the log of a batch job: tables and progress, on stderr."""
+"""What the command line shows on a terminal, or in the log of a batch job: tables on stdout, progress on stderr."""
 
 from __future__ import annotations
 
@@ -8,7 +8,7 @@ import sys
 import time
 from collections.abc import Callable, Sequence
 from types import TracebackType
-from typing import TYPE_CHECKING, Any, Protocol, Self
+from typing import TYPE_CHECKING, Any, Protocol, Self, TextIO
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -48,7 +48,7 @@ class TileProgress(Protocol):
 def table(
     title: str, rows: Sequence[Sequence[str]], *, headings: Sequence[str] = (), console: Console | None = None
 ) -> None:
-    """Print a table on stderr; nothing in it is read as markup, and in a log nothing is folded.
+    """Print a table on stdout; nothing in it is read as markup, and in a log nothing is folded.
 
     Parameters
     ----------
@@ -60,9 +60,9 @@ def table(
     console : rich Console, optional
         Where to print instead.
     """
-    if not rows or not _on_terminal(console):
+    if not rows or not _on_terminal(console, sys.stdout):
         # Rich shows not even the title of a table without rows.
-        _write_line(console, _plain_table(title, [headings, *rows] if headings else rows))
+        _write_line(console, _plain_table(title, [headings, *rows] if headings else rows), sys.stdout)
         return
     # Rich takes about 0.1 s to import: only where it is used.
     from rich import box
@@ -76,7 +76,7 @@ def table(
         drawn.add_column(Text(heading), style="" if index else "cyan", overflow="fold")
     for row in rows:
         drawn.add_row(*map(Text, row))
-    _console(console).print(drawn)
+    _console(console, sys.stdout).print(drawn)
 
 
 def _plain_table(title: str, rows: Sequence[Sequence[str]]) -> str:
@@ -119,7 +119,7 @@ class ProgressLine:
         self._bar: Any = None
 
     def __enter__(self) -> Self:
-        if not self._quiet and _on_terminal(self._console):
+        if not self._quiet and _on_terminal(self._console, sys.stderr):
             self._bar = _bar(self._console)
         return self
 
@@ -134,7 +134,7 @@ class ProgressLine:
             self._bar.update(task, completed=progress.done, total=progress.total, **_words(progress))
         elif self._clock() - self._shown >= self._interval:
             self._shown = self._clock()
-            _write_line(self._console, describe(progress))
+            _write_line(self._console, describe(progress), sys.stderr)
 
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
@@ -144,7 +144,7 @@ class ProgressLine:
         elif self._last is not None and not self._quiet:
             complete = kind is None and self._last.done >= self._last.total
             end = f"{'finished' if complete else 'stopped'} after {duration(self._last.seconds)}"
-            _write_line(self._console, f"{describe(self._last, left=False)}, {end}")
+            _write_line(self._console, f"{describe(self._last, left=False)}, {end}", sys.stderr)
 
 
 def describe(progress: TileProgress, *, left: bool = True) -> str:
@@ -190,7 +190,7 @@ def _bar(console: Console | None) -> Any:
         MofNCompleteColumn(),
         TextColumn("{task.fields[rate]}"),
         TextColumn("{task.fields[left]}"),
-        console=_console(console),
+        console=_console(console, sys.stderr),
         # Stdout may be a file that somebody reads: rich would send what is printed there to stderr.
         redirect_stdout=False,
         expand=True,
@@ -199,26 +199,26 @@ def _bar(console: Console | None) -> Any:
     return bar
 
 
-def _on_terminal(console: Console | None) -> bool:
+def _on_terminal(console: Console | None, stream: TextIO) -> bool:
     """Whether what is written appears on a terminal that can redraw a line."""
     if console is not None:
         return console.is_terminal and not console.is_dumb_terminal
-    return sys.stderr.isatty() and os.environ.get("TERM", "") not in ("", "dumb", "unknown")
+    return stream.isatty() and os.environ.get("TERM", "") not in ("", "dumb", "unknown")
 
 
-def _console(console: Console | None) -> Console:
+def _console(console: Console | None, stream: TextIO) -> Console:
     if console is not None:
         return console
     from rich.console import Console as RichConsole
 
-    return RichConsole(stderr=True, highlight=False)
+    return RichConsole(file=stream, highlight=False)
 
 
-def _write_line(console: Console | None, text: str) -> None:
+def _write_line(console: Console | None, text: str, stream: TextIO) -> None:
     """Write plain text at once; a batch job's log is looked at while it grows."""
-    stream = sys.stderr if console is None else console.file
-    stream.write(text + "\n")
-    stream.flush()
+    file = stream if console is None else console.file
+    file.write(text + "\n")
+    file.flush()
 
 
 __all__ = ["INTERVAL", "ProgressLine", "TileProgress", "describe", "duration", "table"]

@@ -161,13 +161,13 @@ def test_tables_without_rows() -> None:
         assert "Nothing" in written.getvalue()
 
 
-def test_everything_goes_to_stderr(capsys: pytest.CaptureFixture[str]) -> None:
+def test_tables_go_to_stdout_and_progress_to_stderr(capsys: pytest.CaptureFixture[str]) -> None:
     table("Plan", [("tiles", "400")])
     with ProgressLine() as line:
         line.update(Tiles(120))
     captured = capsys.readouterr()
-    assert captured.out == ""
-    assert captured.err.startswith("Plan\n  tiles  400\n120 of 400 tiles (30 %)")
+    assert captured.out == "Plan\n  tiles  400\n"
+    assert captured.err.startswith("120 of 400 tiles (30 %)")
 
 
 def test_results_printed_beside_a_bar_stay_on_stdout(capsys: pytest.CaptureFixture[str]) -> None:

@@ -10,19 +10,16 @@ import numpy as np
 import numpy.typing as npt
 
 from cubeforge.engine.cache import Patch, PatchCache
+from cubeforge.engine.patches import PATCH_STATISTICS, PatchMaker
 from cubeforge.engine.plan import Plan, entry_bytes, make_plan, tile_area
 from cubeforge.engine.setup import Setup
-from cubeforge.mesh.leaves import leaf_mask
-from cubeforge.quantities import planck, rayleigh_jeans_factor
+from cubeforge.quantities import JANSKY, planck, rayleigh_jeans_factor
 from cubeforge.transfer.gather_kernels import STATISTICS
 from cubeforge.transfer.march_kernels import BLOCK, march_tile
-from cubeforge.transfer.optical import LineCells, pack_cells
 from cubeforge.transfer.pointers import addresses
 from cubeforge.transfer.view import rays_per_pixel
 
 Area = tuple[int, int, int, int]
-JANSKY = 1e-23
-"""erg / (s cm2 Hz)."""
 
 
 @dataclass(frozen=True)
@@ -43,9 +40,8 @@ class TileResult:
     statistics: tuple[float, ...]
 
 
-TILE_STATISTICS = (*STATISTICS, "mended_cells", "narrow_cells", "read_bytes")
-"""Statistics of a tile: what the march counts; cells mended, cells with lines narrower than planned for, and
-bytes read, in the patches that were loaded on the tile's behalf."""
+TILE_STATISTICS = (*STATISTICS, *PATCH_STATISTICS)
+"""Statistics of a tile: what the march counts, and what was counted in patches made on the tile's behalf."""
 
 
 class TileWorker:
@@ -83,30 +79,15 @@ class TileWorker:
         cache, self._held = (2**62, 2**62) if memory is None else self.plan.share(memory, threads)
         given = setup.job.channels.systemic
         self._systemic = float(systemic if systemic is not None else (0.0 if given == "mean" else given))
-        self._fields = setup.gas.required_fields()
+        raw = cache // 4 if setup.job.march.reconstruction == "linear" else 0
+        self._maker = PatchMaker(setup, self._systemic, raw)
         self._entry_bytes = entry_bytes(setup)
         self._loaded: dict[int, npt.NDArray[np.float64]] = {}
-        self.cache = PatchCache(self._load, cache)
+        self.cache = PatchCache(self._load, cache - raw)
 
     def _load(self, patch: int) -> Patch:
-        """Read a patch and turn it into what the march needs."""
-        setup = self.setup
-        raw = setup.snapshot.read(patch, self._fields)
-        leaf = leaf_mask(setup.hierarchy, patch)
-        state = setup.gas.state(raw, leaf, f"{setup.snapshot.path}: {self._where(patch)}")
-        b = setup.gas.line_width(state.temperature, setup.molecule.mass)
-        kappa, emis = setup.excitation.coefficients(state.n_molecule, state.temperature)
-        toward = setup.view.toward
-        velocity = self._systemic + sum(toward[axis] * state.velocity[axis] for axis in range(3))
-        narrow = np.count_nonzero((b < setup.narrowest * (1.0 - 1e-6)) & leaf)
-        read = int(setup.snapshot.read_bytes(np.array([patch]), self._fields)[0])
-        self._loaded[patch] = np.array([state.mended_cells, narrow, read], dtype=np.float64)
-        return pack_cells(state.density, velocity, [LineCells(kappa, emis, b)], setup.band, setup.unit_cm)
-
-    def _where(self, patch: int) -> str:
-        hierarchy = self.setup.hierarchy
-        lo = hierarchy.lo[patch].tolist()
-        return f"level {hierarchy.level[patch]}, patch {patch} (first cell {lo})"
+        cells, self._loaded[patch] = self._maker.make(patch)
+        return cells
 
     def _groups(self, area: Area) -> Iterator[tuple[Area, npt.NDArray[np.int64]]]:
         """Cut an area until the patches behind each part fit; down to a block of pixels, never across one."""
@@ -174,7 +155,7 @@ class TileWorker:
             rows, columns = slice(area[2] - y0, area[3] - y0), slice(area[0] - x0, area[1] - x0)
             if len(entries):
                 image[:, rows, columns], maps[0, rows, columns] = self._march(area, entries, statistics)
-        loaded = np.zeros(3)
+        loaded = np.zeros(len(PATCH_STATISTICS))
         for patch in list(self._loaded):
             loaded += self._loaded.pop(patch, 0.0)
         return TileResult(self._in_unit(image), maps, (*statistics.tolist(), *loaded.tolist()))

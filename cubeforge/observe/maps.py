@@ -20,12 +20,10 @@ from cubeforge.cube.fits import finished_tiles
 from cubeforge.cube.spec import CubeSpec
 from cubeforge.cube.tiles import Cube
 from cubeforge.errors import CubeError
-from cubeforge.quantities import KM_S, planck, rayleigh_jeans_factor
+from cubeforge.quantities import JANSKY, KM_S, planck, rayleigh_jeans_factor
 
 Array = npt.NDArray[np.float64]
 
-JANSKY = 1e-23
-"""One jansky in erg / (s cm2 Hz)."""
 PIECE = 2**21
 """Values of a tile that are worked on at the same time."""
 FLOOR = 1e-3

@@ -10,7 +10,7 @@ line width times sqrt(ln 2), so that the profile is ``2**-(u*u)``, and optical d
 transmission is ``2**-s``.
 
 Polynomials are Chebyshev fits; relative errors, measured in float32, are beside them. Tried and slower: one ray at a
-time with channels in the lanes (ragged windows: 2 to 3 times slower), loops left to the compiler's vectoriser (4 times).
+time with channels in the lanes (ragged windows: 2 to 3 times slower), the compiler's own vectoriser (4 times).
 """
 
 from __future__ import annotations

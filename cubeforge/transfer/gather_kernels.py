@@ -10,8 +10,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
-import numpy as np
-from numba import carray, float32, njit
+from numba import carray, njit
 
 from cubeforge.transfer.channel_kernels import ROW
 from cubeforge.transfer.pointers import as_float32_pointer
@@ -81,7 +80,8 @@ def cuts(span: float) -> int:
 
 @njit(**_merged)
 def put_line(cell: Array, at: int, v: float, half_span: float, pieces: int, length: float, channels: int,
-             reach: float, cut: float, values: Array, windows: Array, n: int, line: int, statistics: Array) -> bool:  # fmt: skip
+             reach: float, cut: float, values: Array, windows: Array, n: int, line: int,
+             statistics: Array) -> bool:  # fmt: skip
     """Write one line of one crossing into `pieces` entries from `n` on; False when no channel is touched.
 
     `v` is the velocity at the crossing's middle from channel 0, `half_span` its change from there to the far end.

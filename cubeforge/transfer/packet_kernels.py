@@ -98,7 +98,7 @@ def pack_rows(target: float, lines: int, values: Array, windows: Array, far: Arr
             row += 1
             i += 1
         taken[lane] = i
-    return count
+    return int(count)
 
 
 @njit(**_merged)
@@ -123,7 +123,7 @@ def apply_row(rows: Array, row: int, row_windows: Array, lines: int, offsets: Ar
 
 @njit(**_merged)
 def apply_rows(count: int, done: int, touched: Array, rows: Array, row_windows: Array, lines: int, offsets: Array,
-               channels: int, state: Array, sums: Array, folded: Array) -> int:  # fmt: skip
+               channels: int, state: Array, sums: Array, folded: Array) -> Any:  # fmt: skip
     """Pass light through `count` rows, folding every `FOLD` rows of the packet; returns the rows done in all."""
     for row in range(count):
         first, last = apply_row(rows, row, row_windows, lines, offsets, channels, state, sums)
