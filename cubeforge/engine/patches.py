@@ -128,7 +128,7 @@ class PatchMaker:
             The patch cannot be read or used; the message names it.
         """
         setup = self._setup
-        where = self._where(patch)
+        where = setup.where(patch)
         leaf = leaf_mask(setup.hierarchy, patch)
         state = setup.gas.state(self._raw.read(patch, self._fields), leaf, where)
         kappa, emis = setup.excitation.coefficients(state.n_molecule, state.temperature)
@@ -153,11 +153,6 @@ class PatchMaker:
         counts = [state.mended_cells, narrow, self._raw.take_count(), emitted.sum()]
         counts.append(emitted[limited].sum() if limited.size else 0.0)
         return cells, np.array(counts, dtype=np.float64)
-
-    def _where(self, patch: int) -> str:
-        hierarchy = self._setup.hierarchy
-        lo = hierarchy.lo[patch].tolist()
-        return f"{self._setup.snapshot.path}: level {hierarchy.level[patch]}, patch {patch} (first cell {lo})"
 
     def _along(self, velocity: Sequence[FloatArray]) -> FloatArray:
         """Part along the line of sight."""

@@ -71,6 +71,14 @@ class Setup:
         """The snapshot's hierarchy."""
         return self.snapshot.hierarchy
 
+    def where(self, patch: int) -> str:
+        """Name of a patch for messages."""
+        hierarchy = self.hierarchy
+        return (
+            f"{self.snapshot.path}: level {hierarchy.level[patch]}, patch {patch} "
+            f"(first cell {hierarchy.lo[patch].tolist()})"
+        )
+
     @property
     def tile(self) -> int:
         """Side of a tile in pixels; no larger than it takes to hold the image."""
@@ -82,6 +90,18 @@ class Setup:
         """Entries of the scene by their place on the sky."""
         rect = self.scene.rect
         return SkyIndex(rect[:, ::2], rect[:, 1::2], self.tile, (self.view.nx, self.view.ny))
+
+    @cached_property
+    def home_tile(self) -> npt.NDArray[np.int64]:
+        """First tile that each patch is behind, shape (patches,): where what is found in a patch is counted, once."""
+        rows, columns = -(-self.view.ny // self.tile), -(-self.view.nx // self.tile)
+        low = np.clip(np.floor(self.scene.rect[:, ::2]), 0, (self.view.nx - 1, self.view.ny - 1)).astype(
+            np.int64
+        )
+        column, row = (low // self.tile).T
+        home = np.full(self.hierarchy.patches, rows * columns, dtype=np.int64)
+        np.minimum.at(home, self.scene.patch, row * columns + column)
+        return home
 
     @cached_property
     def unit_cm(self) -> float:

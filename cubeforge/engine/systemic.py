@@ -23,9 +23,7 @@ def systemic_velocity(setup: Setup) -> float:
     fields = setup.gas.required_fields()
     for patch in np.unique(setup.scene.patch):
         leaf = leaf_mask(setup.hierarchy, int(patch))
-        state = setup.gas.state(
-            setup.snapshot.read(int(patch), fields), leaf, f"{setup.snapshot.path}: patch {patch}"
-        )
+        state = setup.gas.state(setup.snapshot.read(int(patch), fields), leaf, setup.where(int(patch)))
         volume = float(np.prod(setup.hierarchy.cell_size[setup.hierarchy.level[patch]]))
         mass = np.where(leaf, state.density, 0.0) * volume
         toward = setup.view.toward

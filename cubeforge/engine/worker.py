@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
@@ -41,7 +42,10 @@ class TileResult:
 
 
 TILE_STATISTICS = (*STATISTICS, *PATCH_STATISTICS)
-"""Statistics of a tile: what the march counts, and what was counted in patches made on the tile's behalf."""
+"""Statistics of a tile: what the march counts; what was counted in the patches whose first tile it is, so that a sum
+over the tiles has each patch once; and the bytes that were read meanwhile."""
+
+READ = PATCH_STATISTICS.index("read_bytes")
 
 
 class TileWorker:
@@ -82,11 +86,13 @@ class TileWorker:
         raw = cache // 4 if setup.job.march.reconstruction == "linear" else 0
         self._maker = PatchMaker(setup, self._systemic, raw)
         self._entry_bytes = entry_bytes(setup)
-        self._loaded: dict[int, npt.NDArray[np.float64]] = {}
+        self._counts = np.zeros((setup.hierarchy.patches, len(PATCH_STATISTICS)))
+        self._read: list[float] = []
         self.cache = PatchCache(self._load, cache - raw)
 
     def _load(self, patch: int) -> Patch:
-        cells, self._loaded[patch] = self._maker.make(patch)
+        cells, self._counts[patch] = self._maker.make(patch)
+        self._read.append(float(self._counts[patch, READ]))
         return cells
 
     def _groups(self, area: Area) -> Iterator[tuple[Area, npt.NDArray[np.int64]]]:
@@ -155,10 +161,20 @@ class TileWorker:
             rows, columns = slice(area[2] - y0, area[3] - y0), slice(area[0] - x0, area[1] - x0)
             if len(entries):
                 image[:, rows, columns], maps[0, rows, columns] = self._march(area, entries, statistics)
-        loaded = np.zeros(len(PATCH_STATISTICS))
-        for patch in list(self._loaded):
-            loaded += self._loaded.pop(patch, 0.0)
-        return TileResult(self._in_unit(image), maps, (*statistics.tolist(), *loaded.tolist()))
+        counted = self._patch_statistics(tile, (x0, x1, y0, y1))
+        return TileResult(self._in_unit(image), maps, (*statistics.tolist(), *counted.tolist()))
+
+    def _patch_statistics(self, tile: int, area: Area) -> npt.NDArray[np.float64]:
+        """`PATCH_STATISTICS` of the patches whose first tile this is; bytes as they were read, each told once."""
+        patches = np.unique(self.setup.scene.patch[self.setup.sky.patches_in(*area)])
+        total: npt.NDArray[np.float64] = self._counts[patches[self.setup.home_tile[patches] == tile]].sum(
+            axis=0
+        )
+        total[READ] = 0.0
+        with contextlib.suppress(IndexError):
+            while True:
+                total[READ] += self._read.pop()
+        return total
 
     def _in_unit(self, image: npt.NDArray[np.float32]) -> npt.NDArray[np.float32]:
         """Kelvins above the background -> what the job asks for, in place."""
