@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+from collections.abc import Iterator
 from dataclasses import asdict, dataclass, field
 from typing import Any
 
@@ -95,7 +96,7 @@ class Plan:
         free = memory - threads * (self.tile_bytes + self.build_bytes)
         if memory < self.least_memory(threads):
             raise PlanError(
-                f"memory: {show_bytes(memory)} a worker with {threads} threads is too little; this render needs "
+                f"memory: {show_bytes(memory)} is too little for a worker (threads: {threads}); this render needs "
                 f"{show_bytes(self.least_memory(threads))}: for each thread {show_bytes(self.tile_bytes)} for a "
                 f"tile, {show_bytes(self.block_bytes)} for the patches behind {BLOCK} x {BLOCK} pixels and "
                 f"{show_bytes(self.build_bytes)} to prepare a patch; fewer threads, smaller tiles or fewer "
@@ -160,14 +161,28 @@ def _fullest_block(setup: Setup, sizes: npt.NDArray[np.int64], area: tuple[int, 
     return best
 
 
+def _flat(value: Any, name: str) -> Iterator[tuple[str, str]]:
+    """Dotted key and value of everything in nested dictionaries; what is not given is left out."""
+    if isinstance(value, dict):
+        for key, inner in value.items():
+            yield from _flat(inner, f"{name}.{key}")
+    elif value is not None:
+        yield name, json.dumps(value)
+
+
 def fingerprint_parts(setup: Setup) -> dict[str, str]:
-    """What changes the pixels, part by part: readable where short, hashed where long."""
+    """What changes the pixels, key by key.
+
+    Left out are paths, and what only decides whether a cube comes about: `gas.bad_cells` and `channels.outside`.
+    """
     job = setup.job
-    kept = job.model_dump(
-        mode="json", exclude={"snapshot": {"path"}, "line": {"molecule"}, "output": {"cube", "tile"}}
-    )
-    parts = {f"job.{name}": json.dumps(section, sort_keys=True) for name, section in kept.items()}
-    return parts | {
+    left_out = {
+        "snapshot": {"path"}, "gas": {"bad_cells"}, "line": {"molecule"}, "view": {"pixel"},
+        "channels": {"outside"}, "output": {"cube", "tile"},
+    }  # fmt: skip
+    return dict(_flat(job.model_dump(mode="json", exclude=left_out), "job")) | {
+        # As a length, however it was written.
+        "job.view.pixel": json.dumps(job.view.pixel_length),
         "snapshot": setup.snapshot.identity,
         "molecule": setup.molecule.digest,
         "tile": str(setup.tile),
