@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-import sys
+import signal
 import traceback
 from dataclasses import asdict
 from pathlib import Path
@@ -24,11 +24,28 @@ class _Group(click.Group):
         try:
             return super().invoke(ctx)
         except CubeforgeError as error:
-            if ctx.params.get("debug"):
-                traceback.print_exc()
-            for line in str(error).splitlines():
-                click.echo(f"cubeforge: {line}", err=True)
+            self._tell(ctx, str(error))
             ctx.exit(error.exit_status)
+        except BrokenPipeError:
+            raise
+        except OSError as error:
+            self._tell(ctx, f"{error.filename or 'a file'}: {error.strerror or error}")
+            ctx.exit(3)
+        except KeyboardInterrupt:
+            later = "; the same command goes on from here" if ctx.invoked_subcommand == "render" else ""
+            self._tell(ctx, f"stopped{later}")
+            ctx.exit(130)
+
+    def _tell(self, ctx: click.Context, message: str) -> None:
+        if ctx.params.get("debug"):
+            traceback.print_exc()
+        for line in message.splitlines():
+            click.echo(f"cubeforge: {line}", err=True)
+
+
+def _stop_like_interrupt() -> None:
+    """Let SIGTERM, with which batch systems stop jobs, end a render as Ctrl-C does."""
+    signal.signal(signal.SIGTERM, lambda *_: signal.raise_signal(signal.SIGINT))
 
 
 @click.group(cls=_Group, context_settings={"help_option_names": ["-h", "--help"]})
@@ -58,7 +75,8 @@ def inspect(snapshot: Path, as_json: bool) -> None:
 @main.command()
 @click.argument("job", type=click.Path(path_type=Path))
 @click.option("--json", "as_json", is_flag=True, help="Write JSON.")
-@click.option("--threads", default=1, show_default=True, help="Threads of each worker.")
+@click.option("--threads", default=1, show_default=True, type=click.IntRange(1),
+              help="Threads of each worker.")  # fmt: skip
 def plan(job: Path, as_json: bool, threads: int) -> None:
     """Validate a JOB file and say what its render takes; reads no field data."""
     from cubeforge.engine.plan import make_plan
@@ -98,19 +116,16 @@ def _memory(_: click.Context, __: click.Parameter, value: str | None) -> int | N
 def render(job: Path, workers: int, threads: int, memory: int | None, scheduler_file: Path | None, picture: bool,
            quiet: bool) -> None:  # fmt: skip
     """Render a JOB file into its cube; the same command goes on after an interruption."""
+    _stop_like_interrupt()
     from cubeforge.engine.render import render as run
     from cubeforge.job import load_job
     from cubeforge.terminal import ProgressLine
     from cubeforge.terminal_pages import show_outcome
 
     loaded = load_job(job)
-    try:
-        with ProgressLine(quiet=quiet) as line:
-            outcome = run(loaded, workers=workers, threads=threads, memory=memory,
-                          scheduler_file=scheduler_file, watch=line.update)  # fmt: skip
-    except KeyboardInterrupt:
-        click.echo("cubeforge: stopped; the same command goes on from here", err=True)
-        sys.exit(130)
+    with ProgressLine(quiet=quiet) as line:
+        outcome = run(loaded, workers=workers, threads=threads, memory=memory,
+                      scheduler_file=scheduler_file, watch=line.update)  # fmt: skip
     if picture:
         from cubeforge.report.quicklook import quicklook
 
@@ -127,12 +142,18 @@ def render(job: Path, workers: int, threads: int, memory: int | None, scheduler_
 @click.option("--overwrite", is_flag=True, help="Replace FITS if it is there.")
 @click.option("--partial", is_flag=True, help="Write an unfinished cube, NaN where tiles are missing.")
 @click.option("--maps", is_flag=True, help="Write by-products, such as the mass column, as extensions.")
-def export(cube: Path, fits: Path, overwrite: bool, partial: bool, maps: bool) -> None:
+@click.option("--clipped", is_flag=True,
+              help="Write a cube whose channels miss more of the line than its job allows.")  # fmt: skip
+def export(cube: Path, fits: Path, overwrite: bool, partial: bool, maps: bool, clipped: bool) -> None:
     """Write a finished CUBE to a FITS file, streamed."""
     from cubeforge.cube.fits import export_fits
     from cubeforge.cube.store import open_cube
+    from cubeforge.engine.outside import check_outside
 
-    export_fits(open_cube(cube), fits, overwrite=overwrite, partial=partial, maps=maps)
+    opened = open_cube(cube)
+    if not clipped:
+        check_outside(opened)
+    export_fits(opened, fits, overwrite=overwrite, partial=partial, maps=maps)
     click.echo(str(fits))
 
 

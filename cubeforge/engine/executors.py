@@ -10,13 +10,18 @@ from typing import Any, Protocol
 
 from cubeforge.cube.ledger import TileRecord
 from cubeforge.engine.batches import Batches
-from cubeforge.engine.shared import forget, run_batch
-from cubeforge.errors import CubeforgeError, EngineError
+from cubeforge.engine.interrupts import hold_interrupts
+from cubeforge.engine.shared import BatchResult, forget, run_batch
+from cubeforge.errors import EngineError
 
 WINDOW = 3
 """Batches under way for each thread: enough that none waits for the next."""
+WAIT_FOR_SCHEDULER = 60.0
+"""Seconds to wait for a given scheduler to answer."""
 WAIT_FOR_WORKERS = 60.0
-"""Seconds to wait for the first worker of a given scheduler."""
+"""Seconds to wait for its first worker."""
+SILENT = logging.CRITICAL
+"""Level below which dask's log is dropped."""
 
 
 class Executor(Protocol):
@@ -32,6 +37,14 @@ class Executor(Protocol):
         ...
 
 
+def _booked(result: BatchResult, batches: Batches) -> list[TileRecord]:
+    """The records of a batch, after which the next can be sized; raises the error that stopped it."""
+    if result.error is not None:
+        raise result.error
+    batches.learn(result.records)
+    return result.records
+
+
 class SerialExecutor:
     """One thread, in this process, without dask."""
 
@@ -41,9 +54,7 @@ class SerialExecutor:
         """See `Executor`."""
         try:
             while tiles := batches.take(1):
-                records = run_batch(str(path), tiles)
-                batches.learn(records)
-                yield records
+                yield _booked(run_batch(str(path), tiles), batches)
         finally:
             forget(str(path))
 
@@ -88,59 +99,93 @@ class DaskExecutor:
         try:
             while under_way:
                 future = next(flow)
-                records = self._result(future)
-                batches.learn(records)
+                records = _booked(self._result(future), batches)
                 under_way += feed() - 1
                 yield records
+            # The workers of a given scheduler live on, and should not keep a cube's patches in memory.
+            self._client.run(forget, str(path))
         finally:
             # Whatever is still queued when the render stops is of no use to anyone.
             with contextlib.suppress(Exception):
                 self._client.cancel(list(flow.futures))
 
     @staticmethod
-    def _result(future: Any) -> list[TileRecord]:
+    def _result(future: Any) -> BatchResult:
         from distributed import CancelledError, KilledWorker  # costs 0.4 s at start-up
 
         try:
-            result: list[TileRecord] = future.result()
-        except CubeforgeError:
-            raise
+            result: BatchResult = future.result()
         except KilledWorker as error:
             raise EngineError(
-                f"a batch of tiles was lost with {error.allowed_failures + 1} workers, one after the other: out of "
-                "memory, most likely; give each worker less to do at once (--threads) or more memory, and run "
+                f"{error.allowed_failures + 1} workers died, one after the other, over the same batch of tiles: out "
+                "of memory, most likely; give them more of it, or less to do at once (--threads, --memory), and run "
                 "again: it goes on where it stopped"
             ) from error
         except (CancelledError, OSError) as error:
             raise EngineError(
-                f"the scheduler or its workers went away ({error}); run again to go on"
+                "the dask scheduler or its workers went away; what they had finished is kept, and the same command "
+                "goes on from there"
             ) from error
         return result
 
 
 @contextlib.contextmanager
 def local_executor(workers: int, threads: int) -> Iterator[DaskExecutor]:
-    """A dask cluster of processes on this machine, on the loopback address, gone at the end."""
+    """A dask cluster of processes on this machine, on the loopback address, gone at the end.
+
+    Raises
+    ------
+    EngineError
+        The processes don't start.
+    """
     import dask  # costs 0.5 s at start-up
     from distributed import Client, LocalCluster
 
     # Memory is bounded by the plan, which knows what it is for; dask pausing workers would only stall them.
-    quiet = {"distributed.worker.memory.target": False, "distributed.worker.memory.spill": False,
-             "distributed.worker.memory.pause": False, "distributed.worker.memory.terminate": False}  # fmt: skip
-    with (
-        dask.config.set(quiet),
-        LocalCluster(
-            n_workers=workers,
-            threads_per_worker=threads,
-            processes=True,
-            host="127.0.0.1",
-            dashboard_address=None,
-            worker_dashboard_address=None,
-            silence_logs=logging.ERROR,
-        ) as cluster,
-        Client(cluster) as client,
-    ):
+    unbounded = {
+        f"distributed.worker.memory.{what}": False for what in ("target", "spill", "pause", "terminate")
+    }
+    with _quiet(), dask.config.set(unbounded), contextlib.ExitStack() as closing:
+        with hold_interrupts():
+            try:
+                cluster = LocalCluster(
+                    n_workers=workers,
+                    threads_per_worker=threads,
+                    processes=True,
+                    host="127.0.0.1",
+                    dashboard_address=None,
+                    worker_dashboard_address=None,
+                    silence_logs=SILENT,
+                )
+                closing.callback(_close, cluster)
+                client = Client(cluster)
+            except (RuntimeError, OSError, TimeoutError) as error:
+                raise EngineError(
+                    f"{workers} worker processes on this machine: they don't start ({error}); fewer of them "
+                    "(--workers) may, or none: --workers 0 renders without dask"
+                ) from error
+            closing.callback(_close, client)
         yield DaskExecutor(client)
+
+
+@contextlib.contextmanager
+def _quiet() -> Iterator[None]:
+    """Keep dask's log off the terminal: what goes wrong arrives as an exception, and is told in one line."""
+    # One handler serves dask's loggers, some of which have levels of their own.
+    levels = {handler: handler.level for handler in logging.getLogger("distributed").handlers}
+    for handler in levels:
+        handler.setLevel(SILENT)
+    try:
+        yield
+    finally:
+        for handler, level in levels.items():
+            handler.setLevel(level)
+
+
+def _close(part: Any) -> None:
+    """Close a client or a cluster; tasks that still run are of no use to anyone, and nor are complaints."""
+    with hold_interrupts(), contextlib.suppress(Exception):
+        part.close()
 
 
 @contextlib.contextmanager
@@ -158,9 +203,10 @@ def scheduler_executor(scheduler_file: Path) -> Iterator[DaskExecutor]:
         raise EngineError(
             f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first"
         )
-    try:
-        client = Client(scheduler_file=str(scheduler_file), timeout=WAIT_FOR_WORKERS)
-    except (OSError, TimeoutError, ValueError) as error:
-        raise EngineError(f"{scheduler_file}: the scheduler does not answer ({error})") from error
-    with client:
+    with _quiet(), contextlib.ExitStack() as closing:
+        try:
+            client = Client(scheduler_file=str(scheduler_file), timeout=WAIT_FOR_SCHEDULER)
+        except (OSError, TimeoutError, ValueError) as error:
+            raise EngineError(f"{scheduler_file}: the scheduler does not answer ({error})") from error
+        closing.callback(_close, client)
         yield DaskExecutor(client)

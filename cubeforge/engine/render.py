@@ -16,11 +16,12 @@ from cubeforge.cube.store import Cube, create_cube, open_cube
 from cubeforge.engine.batches import Batches
 from cubeforge.engine.executors import Executor, SerialExecutor, local_executor, scheduler_executor
 from cubeforge.engine.order import z_order
+from cubeforge.engine.outside import allow_outside, check_outside, outside_share, totals
 from cubeforge.engine.plan import Plan, make_plan
 from cubeforge.engine.setup import Setup, build_setup
-from cubeforge.engine.shared import Shared
+from cubeforge.engine.shared import Shared, sweep_shared
 from cubeforge.engine.systemic import systemic_velocity
-from cubeforge.errors import CubeError, CubeforgeError
+from cubeforge.errors import CubeforgeError
 from cubeforge.job import Job, load_job
 
 
@@ -141,14 +142,17 @@ def render(
     path = begin(job.cube_path, plan)
     with Lease(path) as lease:
         cube = open_cube(path, run=lease.run)
+        sweep_shared(cube.ledger)
+        allow_outside(cube.ledger, lease.run, job.channels.outside)
         left, done = tiles_left(cube)
         began = time.perf_counter()
         if len(left):
+            systemic = systemic_velocity(setup)
             with _executor(workers, threads, Path(scheduler_file) if scheduler_file else None) as executor:
                 shared = Shared(
                     job=job.raw, folder=job.folder, cube=str(path), run=lease.run,
-                    fingerprint=plan.spec.fingerprint, systemic=systemic_velocity(setup),
-                    memory=memory, threads=executor.threads,
+                    fingerprint=plan.spec.fingerprint, systemic=systemic, memory=memory,
+                    threads=executor.threads,
                 )  # fmt: skip
                 _drive(executor, shared, left, done, lease, watch)
         return _finish(cube, setup, len(left), time.perf_counter() - began)
@@ -210,27 +214,10 @@ def _drive(
         path.unlink(missing_ok=True)
 
 
-def totals(cube: Cube) -> dict[str, float]:
-    """Sums of the tile statistics that the ledger holds."""
-    state = read_ledger(cube.ledger)
-    return {name: float(state.records[name].sum()) for name in state.statistics}
-
-
-def outside_share(sums: dict[str, float]) -> float:
-    """Share of the thin emission outside the channels, from `totals`."""
-    return sums["emission_outside"] / sums["emission"] if sums.get("emission") else 0.0
-
-
 def _finish(cube: Cube, setup: Setup, rendered: int, seconds: float) -> Outcome:
     sums = totals(cube)
     outside = outside_share(sums)
-    allowed = setup.job.channels.outside
-    if outside > allowed:
-        raise CubeError(
-            f"{cube.path}: the cube is complete, but {100 * outside:.2g} % of the line's emission lies outside the "
-            f"channels, over the {100 * allowed:g} % allowed (channels.outside); a wider range from channels.first "
-            "to channels.last, or another channels.systemic, would hold it, or channels.outside would allow it"
-        )
+    check_outside(cube)
     caveats = list(setup.caveats)
     if sums.get("inverted_crossings"):
         caveats.append(f"{sums['inverted_crossings']:.0f} crossings of inverted (amplifying) gas")

@@ -3,19 +3,19 @@
 from __future__ import annotations
 
 import json
-import os
 import threading
 import time
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
+from cubeforge.cube.durable import Staging
 from cubeforge.cube.ledger import LedgerWriter, TileRecord
 from cubeforge.cube.store import open_cube
 from cubeforge.engine.plan import Plan, make_plan
 from cubeforge.engine.setup import build_setup
 from cubeforge.engine.worker import TILE_STATISTICS, TileWorker
-from cubeforge.errors import EngineError
+from cubeforge.errors import CubeforgeError, EngineError
 from cubeforge.job import parse_job
 
 
@@ -58,11 +58,30 @@ class Shared:
         return Path(self.cube) / "ledger" / f"run-{self.run}.json"
 
     def write(self) -> Path:
-        """Put it where the workers find it."""
-        beside = self.path.with_suffix(".new")
-        beside.write_text(json.dumps(asdict(self)))
-        os.replace(beside, self.path)
+        """Put it where the workers find it; for the run that holds the lease.
+
+        Raises
+        ------
+        EngineError
+            The disk is full, or refuses.
+        """
+        staging = Staging(self.path.parent, self.run, create=False)
+        staging.write(self.path, json.dumps(asdict(self)).encode())
         return self.path
+
+
+def sweep_shared(ledger: Path) -> None:
+    """Remove what runs that were killed have left; for the run that holds the lease, before its own `write`."""
+    for left in ledger.glob("run-*.json"):
+        left.unlink(missing_ok=True)
+
+
+@dataclass(frozen=True)
+class BatchResult:
+    """Tiles of a batch that are stored and booked, and the error that stopped it, if one did."""
+
+    records: list[TileRecord]
+    error: CubeforgeError | None = None
 
 
 class Renderer:
@@ -83,9 +102,10 @@ class Renderer:
         self.cube = open_cube(shared.cube, run=shared.run)
         self.ledger = LedgerWriter(self.cube.ledger, shared.run, TILE_STATISTICS)
 
-    def run(self, tiles: list[int]) -> list[TileRecord]:
+    def run(self, tiles: list[int]) -> BatchResult:
         """Render tiles one after the other, store each, and book them together."""
-        records = []
+        records: list[TileRecord] = []
+        failed: CubeforgeError | None = None
         try:
             for tile in tiles:
                 began = time.perf_counter()
@@ -93,19 +113,23 @@ class Renderer:
                 checksum = self.cube.write_tile(tile, result.image, result.maps)
                 seconds = time.perf_counter() - began
                 records.append(TileRecord(tile, checksum, time.time(), seconds, result.statistics))
+        except CubeforgeError as error:
+            failed = error
         finally:
             # What is durable is booked even if a later tile of the batch fails.
             if records:
                 self.ledger.append(records)
-        return records
+        return BatchResult(records, failed)
 
 
 _renderers: dict[str, Renderer] = {}
 _lock = threading.Lock()
 
 
-def run_batch(path: str, tiles: list[int]) -> list[TileRecord]:
+def run_batch(path: str, tiles: list[int]) -> BatchResult:
     """Render a batch in this process; the task that executors send.
+
+    An error of ours is handed back, not raised: dask would write its traceback to the terminal for each batch.
 
     Parameters
     ----------
@@ -113,13 +137,30 @@ def run_batch(path: str, tiles: list[int]) -> list[TileRecord]:
         What `Shared.write` returned.
     tiles : list of int
     """
+    try:
+        return _renderer(path).run(tiles)
+    except CubeforgeError as error:
+        return BatchResult([], error)
+    except MemoryError:
+        found = EngineError("a worker ran out of memory; give each less to do at once (--memory, --threads)")
+        return BatchResult([], found)
+
+
+def _renderer(path: str) -> Renderer:
     with _lock:
         renderer = _renderers.get(path)
         if renderer is None:
             # One render at a time has its patches in memory.
             _renderers.clear()
-            renderer = _renderers[path] = Renderer(Shared(**json.loads(Path(path).read_text())))
-    return renderer.run(tiles)
+            try:
+                text = Path(path).read_text()
+            except OSError as error:
+                raise EngineError(
+                    f"{path}: cannot be read by a worker ({error.strerror}): either the run has ended, or the cube is "
+                    "not on a file system that all workers share"
+                ) from error
+            renderer = _renderers[path] = Renderer(Shared(**json.loads(text)))
+        return renderer
 
 
 def forget(path: str) -> None:
