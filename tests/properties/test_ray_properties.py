@@ -167,7 +167,8 @@ def random_worker(hierarchy: Hierarchy, toward, north, depth: str, sampling: str
         if depth == "inverted":
             kappa = np.where(chosen, -kappa, kappa)
         velocity = 1e5 * rng.normal(0.0, 0.8, shape)
-        return pack_cells(rng.random(shape), velocity, [LineCells(kappa, emis, b)], setup.band, setup.unit_cm)
+        line = LineCells(kappa, emis, b**2, thermal=1.0, turbulence=0.0)
+        return pack_cells(rng.random(shape), velocity, None, [line], setup.band, setup.unit_cm)[0]
 
     worker.cache = PatchCache(fill, 2**40)
     return worker

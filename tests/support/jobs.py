@@ -19,6 +19,7 @@ DEFAULTS: dict[str, dict[str, Any]] = {
     "view": {"toward": "-z", "distance": "140 pc", "pixel": "1 pc"},
     "channels": {"first": "-2 km/s", "last": "2 km/s", "width": "0.1 km/s", "sampling": "centre"},
     "rays": {"per_side": 1},
+    "march": {"reconstruction": "constant"},
     "output": {"cube": "unused.zarr", "tile": 16},
 }
 """Snapshots of pc, g/cm3, km/s and K; one ray through the middle of each pixel; values at channel centres."""
