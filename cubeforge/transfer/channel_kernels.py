@@ -197,6 +197,15 @@ def fold(first, last, channels, nodes, state, folded):  # type: ignore[no-untype
 
 
 @njit(**_opts)
+def clear_folded(first, last, channels, nodes, folded):  # type: ignore[no-untyped-def]
+    """Start afresh in channels ``first..last``: no intensity, full transmission."""
+    for node in range(nodes):
+        for at in range((node * channels + first) * STEP, (node * channels + last) * STEP, STEP):
+            folded[at : at + LANES] = 0.0
+            folded[at + LANES : at + STEP] = 1.0
+
+
+@njit(**_opts)
 def add_line(rows, base, offsets, first, last, channels, sums):  # type: ignore[no-untyped-def]
     """Add one line of a row to the sums of optical depth (in ln 2) and energy, laid out like the state."""
     tau = load(rows, base) * _LOG2_E

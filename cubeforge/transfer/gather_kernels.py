@@ -10,11 +10,12 @@ from __future__ import annotations
 import math
 from typing import Any
 
+import numpy as np
 from numba import carray, njit
 
 from cubeforge.transfer.channel_kernels import ROW
 from cubeforge.transfer.pointers import as_float32_pointer
-from cubeforge.transfer.ray_kernels import trace
+from cubeforge.transfer.ray_kernels import advance, enter, walls
 
 _opts = {"nogil": True, "cache": True, "error_model": "numpy"}
 _merged = {"inline": "always", **_opts}
@@ -68,8 +69,14 @@ def outside_share(v: float, inv_b: float, channels: int) -> float:
 
 @njit(**_merged)
 def half_width(tau: float, cut: float) -> float:
-    """Half width of a window in line widths: where the crossing's optical depth falls below what `cut` stands for."""
-    return cut if tau <= 1.0 else math.sqrt(math.log(tau) + cut * cut)
+    """Half width of a window in line widths: where the crossing's optical depth falls below what `cut` stands for.
+
+    The logarithm is bounded from above by the float's own exponent and mantissa, at most 0.06 too large.
+    """
+    if tau <= 1.0:
+        return cut
+    log2 = np.float32(tau).view(np.int32) * 2.0**-23 - (127.0 - 0.0861)
+    return math.sqrt(0.6931471805599453 * log2 + cut * cut)
 
 
 @njit(**_merged)
@@ -79,60 +86,59 @@ def cuts(span: float) -> int:
 
 
 @njit(**_merged)
-def put_line(cell: Array, at: int, v: float, half_span: float, pieces: int, length: float, channels: int,
-             reach: float, cut: float, values: Array, windows: Array, n: int, line: int,
-             statistics: Array) -> bool:  # fmt: skip
-    """Write one line of one crossing into `pieces` entries from `n` on; False when no channel is touched.
+def put_entry(v: float, inv_b: float, tau: float, energy: float, half: float, square: float, reach: float,
+              channels: int, n: int, line: int, values: Array, windows: Array) -> bool:  # fmt: skip
+    """Write one line of one entry; whether it touches a channel."""
+    first, last = window(v, half, reach, channels)
+    windows[n, 2 * line] = first
+    windows[n, 2 * line + 1] = last
+    at = line * ROW
+    values[n, at] = tau
+    values[n, at + 1] = energy
+    values[n, at + 2] = v - 0.5 * (channels - 1)
+    values[n, at + 3] = inv_b
+    values[n, at + 4] = square
+    return first < last and (tau != 0.0 or energy != 0.0)
 
-    `v` is the velocity at the crossing's middle from channel 0, `half_span` its change from there to the far end.
+
+@njit(**_opts)
+def put_cut_crossing(cell: Array, at: int, line: int, v: float, half_span: float, pieces: int, length: float,
+                     channels: int, reach: float, cut: float, n: int, values: Array, windows: Array) -> bool:  # fmt: skip
+    """Write one line of a crossing along which the velocity changes, in `pieces` entries from `n` on.
+
+    `v` is the velocity at the crossing's middle from channel 0, `half_span` its change from there to the far end. Each
+    piece gets the Gaussian widened by the even distribution of velocities in it, whose other cumulants
+    `channel_kernels.skew` puts back.
     """
     inv_b = float(cell[at])
-    peak = length * inv_b * _PER_SQRT_PI / pieces
-    tau = cell[at + 1] * peak
-    energy = cell[at + 2] * peak
-    emitted = abs(cell[at + 2]) * length
-    statistics[EMISSION] += emitted
-    statistics[OUTSIDE] += emitted * outside_share(v, inv_b, channels)
-    if abs(half_span) * inv_b > 0.5:
-        statistics[STEEP] += emitted
-    if tau < 0.0:
-        statistics[INVERTED] += 1.0
     part = half_span / pieces
-    widening = 1.0 + 2.0 / 3.0 * (part * inv_b) ** 2
-    inv_wide = inv_b / math.sqrt(widening)
-    square = (part * inv_b) ** 2 / widening
-    scale = inv_wide / inv_b
+    square = (part * inv_b) ** 2
+    widening = 1.0 / (1.0 + square * (2.0 / 3.0))
+    inv_wide = inv_b * math.sqrt(widening)
+    peak = length * inv_wide * _PER_SQRT_PI / pieces
+    tau, energy = cell[at + 1] * peak, cell[at + 2] * peak
     half = half_width(tau, cut) / inv_wide
     touched = False
-    first_line = line * ROW
     for piece in range(pieces):
         here = v + (2 * piece + 1 - pieces) * part
-        first, last = window(here, half, reach, channels)
-        windows[n + piece, 2 * line] = first
-        windows[n + piece, 2 * line + 1] = last
-        values[n + piece, first_line] = tau * scale
-        values[n + piece, first_line + 1] = energy * scale
-        values[n + piece, first_line + 2] = here - 0.5 * (channels - 1)
-        values[n + piece, first_line + 3] = inv_wide
-        values[n + piece, first_line + 4] = square
-        touched |= last > first and (tau != 0.0 or energy != 0.0)
+        touched |= put_entry(here, inv_wide, tau, energy, half, square * widening, reach, channels, n + piece, line,
+                             values, windows)  # fmt: skip
     return touched
 
 
 @njit(**_opts)
-def gather(origin: Array, direction: Array, inverse: Array, pieces: Array, progress: Array, piece_start: Array,
+def gather(origin: Array, direction: Array, inverse: Array, pieces: int, progress: Array, piece_start: Array,
            piece_stop: Array, piece_patch: Array, lo: Array, hi: Array, level: Array, scale: Array,
-           address: Array, lines: int, shifts: Array, channels: int, reach: float, cut: float, cells: Array,
-           ends: Array, offsets: Array, values: Array, windows: Array, far: Array, n: int,
-           statistics: Array) -> tuple[int, float]:  # fmt: skip
+           address: Array, lines: int, shifts: Array, channels: int, reach: float, cut: float,
+           values: Array, windows: Array, far: Array, n: int, statistics: Array) -> tuple[int, float]:  # fmt: skip
     """Append crossings of one ray to its buffer until the ray ends or the buffer is full.
 
     Parameters
     ----------
     pieces : int
         Pieces of the ray (see `ray_kernels.overlay`).
-    progress : int64, shape (2,), changed
-        Piece, and crossing of it, to go on from; ``progress[0] == pieces`` at the end.
+    progress : float64, shape (2,), changed
+        Piece to go on in, and the depth there (a crossing's start); ``progress[0] == pieces`` at the end.
     values : float32, shape (capacity, lines * ROW), out
         See `channel_kernels`; crossings without opacity and emission, or outside the band, are left out.
     windows : int32, shape (capacity, 2 * lines), out
@@ -149,42 +155,85 @@ def gather(origin: Array, direction: Array, inverse: Array, pieces: Array, progr
     column : float
         Mass column of what was gathered, g/cm2.
     """
-    column = 0.0
     width = CELL_HEAD + CELL_LINE * lines
     middle = 0.5 * (channels - 1)
-    while progress[0] < pieces:
-        piece = progress[0]
+    capacity = values.shape[0]
+    piece = int(progress[0])
+    t_begin = progress[1]
+    # Sums are kept in registers: in memory each would wait for the one before.
+    column, emission, outside, steep, crossings, inverted = 0.0, 0.0, 0.0, 0.0, 0, 0
+    full = False
+    while piece < pieces and not full:
         p = piece_patch[piece]
         grid = scale[level[p]]
-        count = trace(origin, direction, inverse, piece_start[piece], piece_stop[piece], lo[p], hi[p], grid, cells,
-                      ends, offsets)  # fmt: skip
         size = (hi[p, 0] - lo[p, 0]) * (hi[p, 1] - lo[p, 1]) * (hi[p, 2] - lo[p, 2])
         cell = carray(as_float32_pointer(address[p]), (size * width,))
+        t, t1 = max(piece_start[piece], t_begin), piece_stop[piece]
+        around = walls(origin, direction, inverse, lo[p], hi[p], grid)
+        walk = enter(origin, direction, t, grid, around)
         ux, uy, uz = direction[0] / grid[0], direction[1] / grid[1], direction[2] / grid[2]
-        for i in range(progress[1], count):
-            at = cells[i] * width
-            length = ends[i + 1] - ends[i]
-            gx, gy, gz = cell[at + 1], cell[at + 2], cell[at + 3]
-            half_span = 0.5 * length * (gx * ux + gy * uy + gz * uz)
-            sharpest = cell[at + CELL_HEAD]
-            for line in range(1, lines):
-                sharpest = max(sharpest, cell[at + CELL_HEAD + CELL_LINE * line])
-            number = cuts(abs(half_span) * sharpest)
-            if n + number > values.shape[0]:
-                progress[1] = i
-                return n, column
-            v = cell[at] + gx * offsets[i, 0] + gy * offsets[i, 1] + gz * offsets[i, 2] + middle
-            column += cell[at + 4] * length
-            statistics[CROSSINGS] += 1.0
-            touched = False
-            for line in range(lines):
-                touched |= put_line(cell, at + CELL_HEAD + CELL_LINE * line, v + shifts[line], half_span, number,
-                                    length, channels, reach, cut, values, windows, n, line,
-                                    statistics)  # fmt: skip
-            if touched:
-                for each in range(number):
-                    far[n + each] = ends[i] + length * (each + 1) / number
-                n += number
-        progress[0] += 1
-        progress[1] = 0
+        px, py, pz = origin[0] / grid[0] - 0.5, origin[1] / grid[1] - 0.5, origin[2] / grid[2] - 0.5
+        inside = True
+        while inside:
+            face = min(walk[4], min(walk[5], walk[6]))
+            end = min(face, t1)
+            if end > t:
+                at = walk[3] * width
+                length = end - t
+                v = float(cell[at])
+                gx, gy, gz = float(cell[at + 1]), float(cell[at + 2]), float(cell[at + 3])
+                half_span = 0.5 * length * (gx * ux + gy * uy + gz * uz)
+                number = 1
+                if gx != 0.0 or gy != 0.0 or gz != 0.0:
+                    depth = 0.5 * (t + end)
+                    v += gx * (px + ux * depth - walk[0]) + gy * (py + uy * depth - walk[1])
+                    v += gz * (pz + uz * depth - walk[2])
+                    sharpest = cell[at + CELL_HEAD]
+                    for line in range(1, lines):
+                        sharpest = max(sharpest, cell[at + CELL_HEAD + CELL_LINE * line])
+                    number = cuts(abs(half_span) * sharpest)
+                if n + number > capacity:
+                    full = True
+                    break
+                column += cell[at + 4] * length
+                crossings += 1
+                touched = False
+                for line in range(lines):
+                    of = at + CELL_HEAD + CELL_LINE * line
+                    inv_b = float(cell[of])
+                    here = v + middle + shifts[line]
+                    emitted = abs(cell[of + 2]) * length
+                    emission += emitted
+                    outside += emitted * outside_share(here, inv_b, channels)
+                    if cell[of + 1] < 0.0:
+                        inverted += 1
+                    if half_span == 0.0:
+                        peak = length * inv_b * _PER_SQRT_PI
+                        tau = cell[of + 1] * peak
+                        touched |= put_entry(here, inv_b, tau, cell[of + 2] * peak, half_width(tau, cut) / inv_b, 0.0,
+                                             reach, channels, n, line, values, windows)  # fmt: skip
+                    else:
+                        if abs(half_span) * inv_b > 0.5:
+                            steep += emitted
+                        touched |= put_cut_crossing(cell, of, line, here, half_span, number, length, channels, reach,
+                                                    cut, n, values, windows)  # fmt: skip
+                if touched:
+                    for each in range(number - 1):
+                        far[n + each] = t + length * (each + 1) / number
+                    n += number
+                    far[n - 1] = end
+                t = end
+            inside = face < t1
+            if inside:
+                walk, inside = advance(walk, face, around)
+        if not full:
+            piece += 1
+            t_begin = -math.inf
+    progress[0] = piece
+    progress[1] = t if full else -math.inf
+    statistics[EMISSION] += emission
+    statistics[OUTSIDE] += outside
+    statistics[STEEP] += steep
+    statistics[CROSSINGS] += crossings
+    statistics[INVERTED] += inverted
     return n, column

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numba import njit
 
-from cubeforge.transfer.channel_kernels import ROW, STEP
+from cubeforge.transfer.channel_kernels import ROW, STEP, clear_folded
 from cubeforge.transfer.gather_kernels import RAYS, gather
 from cubeforge.transfer.packet_kernels import (
     CAPACITY,
@@ -65,18 +65,22 @@ def march_packet(rays: int, origins: Array, direction: Array, inverse: Array, bo
                  cell_size: Array, lo: Array, hi: Array, level: Array, scale: Array, address: Array,
                  candidates: Array, n_candidates: int, lines: int, shifts: Array, offsets_first: Array,
                  channels: int, reach: float, cut: float, start: Array, stop: Array, patch: Array, pieces: Array,
-                 progress: Array, cells: Array, ends: Array, offsets: Array, values: Array, windows: Array,
+                 progress: Array, values: Array, windows: Array,
                  far: Array, rows: Array, row_windows: Array, state: Array, sums: Array, folded: Array,
-                 columns: Array, statistics: Array) -> None:  # fmt: skip
-    """March up to sixteen rays together; leaves intensities in `folded` and mass columns in `columns`."""
+                 touched: Array, columns: Array, statistics: Array) -> None:  # fmt: skip
+    """March up to sixteen rays together.
+
+    Leaves intensities in `folded`, in channels ``touched[2]..touched[3]`` alone, and mass columns in `columns`.
+    """
     taken, filled = np.zeros(LANES, dtype=np.int64), np.zeros(LANES, dtype=np.int64)
     finished = np.ones(LANES, dtype=np.bool_)
-    touched = np.array([channels, 0])
+    touched[:] = (channels, 0, channels, 0)
     for lane in range(rays):
         columns[lane] = 0.0
         near, end = clip_to_region(origins[lane], direction, inverse, box, sphere, cell_size)
         pieces[lane] = 0
-        progress[lane, :] = 0
+        progress[lane, 0] = 0.0
+        progress[lane, 1] = -np.inf
         if near < end:
             pieces[lane] = overlay(origins[lane], direction, inverse, near, end, lo, hi, level, scale, candidates,
                                    n_candidates, start[lane], stop[lane], patch[lane])  # fmt: skip
@@ -87,8 +91,8 @@ def march_packet(rays: int, origins: Array, direction: Array, inverse: Array, bo
             if not finished[lane]:
                 filled[lane], more = gather(
                     origins[lane], direction, inverse, pieces[lane], progress[lane], start[lane, 0], stop[lane, 0],
-                    patch[lane, 0], lo, hi, level, scale, address, lines, shifts, channels, reach, cut, cells, ends,
-                    offsets, values[lane], windows[lane], far[lane], filled[lane], statistics,
+                    patch[lane, 0], lo, hi, level, scale, address, lines, shifts, channels, reach, cut,
+                    values[lane], windows[lane], far[lane], filled[lane], statistics,
                 )  # fmt: skip
                 columns[lane] += more
                 finished[lane] = progress[lane, 0] == pieces[lane]
@@ -164,18 +168,19 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     offsets_first = (nodes - 0.5 * (channels - 1)).astype(np.float32)
     state = np.zeros(n_nodes * channels * STEP, dtype=np.float32)
     sums = np.zeros(n_nodes * channels * STEP if lines > 1 else STEP, dtype=np.float32)
-    folded = np.zeros(n_nodes * channels * STEP)
+    folded = np.empty(n_nodes * channels * STEP)
+    clear_folded(0, channels, channels, n_nodes, folded)
+    touched = np.empty(4, dtype=np.int64)
     values = np.empty((LANES, CAPACITY, lines * ROW), dtype=np.float32)
     windows = np.empty((LANES, CAPACITY, 2 * lines), dtype=np.int32)
     far = np.empty((LANES, CAPACITY))
     rows = np.empty(CAPACITY * lines * ROW * LANES, dtype=np.float32)
     row_windows = np.empty((CAPACITY, 2 * lines), dtype=np.int32)
-    cells, ends, offsets = np.empty(longest, dtype=np.int64), np.empty(longest + 1), np.empty((longest, 3))
     candidates = np.empty(rect.shape[0], dtype=np.int32)
     most_pieces = 2 * rect.shape[0] + 1
     piece_start, piece_stop = np.empty((LANES, 3, most_pieces)), np.empty((LANES, 3, most_pieces))
     piece_patch = np.empty((LANES, 3, most_pieces), dtype=np.int32)
-    pieces, progress = np.empty(LANES, dtype=np.int64), np.empty((LANES, 2), dtype=np.int64)
+    pieces, progress = np.empty(LANES, dtype=np.int64), np.empty((LANES, 2))
     side = rays_per_side.max()
     places, pixels = (
         np.empty((PACKET_SIDE * PACKET_SIDE * side * side, 2)),
@@ -196,21 +201,19 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
                     for axis in range(3):
                         origins[lane, axis] = (start[axis] + places[first + lane, 0] * step_x[axis]
                                                + places[first + lane, 1] * step_y[axis])  # fmt: skip
-                for at in range(0, n_nodes * channels * STEP, STEP):
-                    folded[at : at + LANES] = 0.0
-                    folded[at + LANES : at + STEP] = 1.0
                 march_packet(rays, origins, direction, inverse, box, sphere, cell_size, lo, hi, level, scale, address,
                              candidates, n_candidates, lines, shifts, offsets_first, channels, reach, cut, piece_start,
-                             piece_stop, piece_patch, pieces, progress, cells, ends, offsets, values, windows, far,
-                             rows, row_windows, state, sums, folded, columns, statistics)  # fmt: skip
+                             piece_stop, piece_patch, pieces, progress, values, windows, far,
+                             rows, row_windows, state, sums, folded, touched, columns, statistics)  # fmt: skip
                 for lane in range(rays):
                     px, py = pixels[first + lane]
                     share = 1.0 / rays_per_side[py, px] ** 2
                     column[py, px] += share * columns[lane]
                     into = pixel_sums[py + tile[2] - y0, px + tile[0] - x0]
                     for node in range(n_nodes):
-                        for k in range(channels):
+                        for k in range(touched[2], touched[3]):
                             into[k] += share * weights[node] * folded[(node * channels + k) * STEP + lane]
+                clear_folded(touched[2], touched[3], channels, n_nodes, folded)
             for y in range(y0, y1):
                 for x in range(x0, x1):
                     for k in range(channels):

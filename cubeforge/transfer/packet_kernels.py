@@ -138,9 +138,14 @@ def apply_rows(count: int, done: int, touched: Array, rows: Array, row_windows: 
 
 @njit(**_merged)
 def fold_touched(touched: Array, channels: int, nodes: int, state: Array, folded: Array) -> None:
-    """Fold the channels touched since the last fold."""
+    """Fold the channels ``touched[0]..touched[1]`` that were met since the last fold.
+
+    ``touched[2]..touched[3]`` becomes what the packet has met in all.
+    """
     if touched[0] < touched[1]:
         fold(touched[0], touched[1], channels, nodes, state, folded)
+        touched[2] = min(touched[2], touched[0])
+        touched[3] = max(touched[3], touched[1])
     touched[0] = channels
     touched[1] = 0
 

@@ -16,6 +16,7 @@ import numpy as np
 from numba import njit
 
 _opts = {"nogil": True, "cache": True, "error_model": "numpy"}
+_merged = {"inline": "always", **_opts}
 Array = Any
 
 
@@ -156,79 +157,112 @@ def start_index(t: float, o: float, d: float, step: float, shift: float, lo: int
     return i
 
 
+@njit(**_merged)
+def walls(origin: Array, direction: Array, inverse: Array, lo: Array, hi: Array, grid: Array) -> Any:
+    """What a walk through one patch needs, as numbers: array views made in its loop would cost more than the walk.
+
+    Returns
+    -------
+    low, high : tuple of 3 ints
+        The patch's corners in its level's index space.
+    step, shift : tuple of 3 floats
+        Face i of an axis is at depth ``i * step + shift``.
+    sign : tuple of 3 ints
+        Direction of the walk along each axis.
+    stride : tuple of 3 ints
+        What a step along each axis means in the patch's C order.
+    """
+    step = (grid[0] * inverse[0], grid[1] * inverse[1], grid[2] * inverse[2])
+    shift = (-origin[0] * inverse[0], -origin[1] * inverse[1], -origin[2] * inverse[2])
+    sign = (1 if direction[0] > 0.0 else -1, 1 if direction[1] > 0.0 else -1, 1 if direction[2] > 0.0 else -1)
+    nz = hi[2] - lo[2]
+    stride = (sign[0] * (hi[1] - lo[1]) * nz, sign[1] * nz, sign[2] * 1)
+    return (lo[0], lo[1], lo[2]), (hi[0], hi[1], hi[2]), step, shift, sign, stride
+
+
+@njit(**_merged)
+def enter(origin: Array, direction: Array, t: float, grid: Array, around: Any) -> Any:
+    """Begin a walk (Amanatides & Woo 1987) at depth `t`; `around` is from `walls`.
+
+    Returns
+    -------
+    tuple
+        Cell's index along x, y, z; its place in the patch's C order; depths at which the ray leaves it through the
+        faces of each axis.
+    """
+    low, high, step, shift, sign, _ = around
+    ix = start_index(t, origin[0], direction[0], step[0], shift[0], low[0], high[0], grid[0])
+    iy = start_index(t, origin[1], direction[1], step[1], shift[1], low[1], high[1], grid[1])
+    iz = start_index(t, origin[2], direction[2], step[2], shift[2], low[2], high[2], grid[2])
+    tx = (ix + (sign[0] > 0)) * step[0] + shift[0] if direction[0] != 0.0 else math.inf
+    ty = (iy + (sign[1] > 0)) * step[1] + shift[1] if direction[1] != 0.0 else math.inf
+    tz = (iz + (sign[2] > 0)) * step[2] + shift[2] if direction[2] != 0.0 else math.inf
+    cell = ((ix - low[0]) * (high[1] - low[1]) + (iy - low[1])) * (high[2] - low[2]) + (iz - low[2])
+    return ix, iy, iz, cell, tx, ty, tz
+
+
+@njit(**_merged)
+def advance(walk: Any, face: float, around: Any) -> Any:
+    """Go on through the face, edge or corner at depth `face`; returns the walk, and whether it is in the patch."""
+    ix, iy, iz, cell, tx, ty, tz = walk
+    low, high, step, shift, sign, stride = around
+    inside = True
+    if tx == face:
+        ix += sign[0]
+        cell += stride[0]
+        inside = low[0] <= ix < high[0]
+        tx = (ix + (sign[0] > 0)) * step[0] + shift[0]
+    if ty == face:
+        iy += sign[1]
+        cell += stride[1]
+        inside = inside and low[1] <= iy < high[1]
+        ty = (iy + (sign[1] > 0)) * step[1] + shift[1]
+    if tz == face:
+        iz += sign[2]
+        cell += stride[2]
+        inside = inside and low[2] <= iz < high[2]
+        tz = (iz + (sign[2] > 0)) * step[2] + shift[2]
+    return (ix, iy, iz, cell, tx, ty, tz), inside
+
+
 @njit(**_opts)
 def trace(origin: Array, direction: Array, inverse: Array, t0: float, t1: float, lo: Array, hi: Array,
-          scale: Array, cells: Array, ends: Array, offsets: Array) -> int:  # fmt: skip
-    """Cells of one patch that a ray crosses between depths `t0` and `t1` (after Amanatides & Woo 1987).
+          grid: Array, cells: Array, ends: Array) -> int:  # fmt: skip
+    """Cells of one patch that a ray crosses between depths `t0` and `t1`.
 
     Parameters
     ----------
-    lo, hi, scale : int64, shape (3,)
+    lo, hi, grid : int64, shape (3,)
         The patch's corners in its level's index space; finest units per cell.
     cells : int64, shape (n,), out
         Flat index of each cell crossed, in the patch's C order (x, y, z).
     ends : float64, shape (n + 1,), out
-        Depths: crossing i reaches from ``ends[i]`` to ``ends[i + 1]``.
-    offsets : float64, shape (n, 3), out
-        Middle of each crossing from its cell's centre, in cells.
-        All want ``sum(hi - lo) + 1`` places, `ends` one more.
+        Depths: crossing i reaches from ``ends[i]`` to ``ends[i + 1]``. Both want ``sum(hi - lo) + 1`` places, `ends`
+        one more.
 
     Returns
     -------
     int
         Number of crossings; all have a positive length.
     """
-    dx, dy, dz = direction[0], direction[1], direction[2]
-    sx, sy, sz = scale[0] * inverse[0], scale[1] * inverse[1], scale[2] * inverse[2]
-    bx, by, bz = -origin[0] * inverse[0], -origin[1] * inverse[1], -origin[2] * inverse[2]
-    ix = start_index(t0, origin[0], dx, sx, bx, lo[0], hi[0], scale[0])
-    iy = start_index(t0, origin[1], dy, sy, by, lo[1], hi[1], scale[1])
-    iz = start_index(t0, origin[2], dz, sz, bz, lo[2], hi[2], scale[2])
-    stride_y = hi[2] - lo[2]
-    stride_x = (hi[1] - lo[1]) * stride_y
-    step_x, step_y, step_z = 1 if dx > 0.0 else -1, 1 if dy > 0.0 else -1, 1 if dz > 0.0 else -1
-    tx = (ix + (dx > 0.0)) * sx + bx if dx != 0.0 else math.inf
-    ty = (iy + (dy > 0.0)) * sy + by if dy != 0.0 else math.inf
-    tz = (iz + (dz > 0.0)) * sz + bz if dz != 0.0 else math.inf
-    # Position in cells, less one half: the offset from a cell's centre is this minus the cell's index.
-    px, py, pz = origin[0] / scale[0] - 0.5, origin[1] / scale[1] - 0.5, origin[2] / scale[2] - 0.5
-    vx, vy, vz = dx / scale[0], dy / scale[1], dz / scale[2]
-    cell = (ix - lo[0]) * stride_x + (iy - lo[1]) * stride_y + (iz - lo[2])
+    around = walls(origin, direction, inverse, lo, hi, grid)
+    walk = enter(origin, direction, t0, grid, around)
     t = t0
     ends[0] = t
     n = 0
-    while True:
-        face = min(tx, min(ty, tz))
+    inside = True
+    while inside:
+        face = min(walk[4], min(walk[5], walk[6]))
         end = min(face, t1)
         if end > t:
-            middle = 0.5 * (t + end)
-            cells[n] = cell
-            offsets[n, 0] = px + vx * middle - ix
-            offsets[n, 1] = py + vy * middle - iy
-            offsets[n, 2] = pz + vz * middle - iz
+            cells[n] = walk[3]
             n += 1
             t = end
             ends[n] = t
-        if face >= t1:
-            return n
-        if tx == face:
-            ix += step_x
-            cell += step_x * stride_x
-            if ix < lo[0] or ix >= hi[0]:
-                return n
-            tx = (ix + (dx > 0.0)) * sx + bx
-        if ty == face:
-            iy += step_y
-            cell += step_y * stride_y
-            if iy < lo[1] or iy >= hi[1]:
-                return n
-            ty = (iy + (dy > 0.0)) * sy + by
-        if tz == face:
-            iz += step_z
-            cell += step_z
-            if iz < lo[2] or iz >= hi[2]:
-                return n
-            tz = (iz + (dz > 0.0)) * sz + bz
+        inside = face < t1
+        if inside:
+            walk, inside = advance(walk, face, around)
+    return n
 
 
 @njit(**_opts)

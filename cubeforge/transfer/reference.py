@@ -45,12 +45,11 @@ def crossings(scene: Scene, x: float, y: float) -> Iterator[tuple[int, npt.NDArr
         np.arange(n, dtype=np.int32), n, start, stop, patch,
     )  # fmt: skip
     cells, ends = np.empty(scene.longest, dtype=np.int64), np.empty(scene.longest + 1)
-    offsets = np.empty((scene.longest, 3))
     for piece in range(pieces):
         entry = int(patch[0, piece])
         count = trace(
             origin, scene.direction, inverse, start[0, piece], stop[0, piece], scene.lo[entry], scene.hi[entry],
-            scene.scale[scene.level[entry]], cells, ends, offsets,
+            scene.scale[scene.level[entry]], cells, ends,
         )  # fmt: skip
         yield entry, cells[:count].copy(), np.diff(ends[: count + 1])
 
