@@ -106,7 +106,7 @@ def _with_provenance(cards: list[Card], spec: CubeSpec) -> Any:
         ("MOLECULE", spec.molecule, "molecule"),
         ("LINE", spec.line, "transition"),
         ("TBACKGND", spec.background_K, "[K] temperature of the background"),
-        ("PLAN", spec.fingerprint, "fingerprint of what made the pixels"),
+        ("PLAN", spec.fingerprint, ""),
         ("CREATOR", f"cubeforge {VERSION}", "program"),
     )
     for name, value, comment in texts:

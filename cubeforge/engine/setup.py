@@ -190,7 +190,7 @@ def build_gas(job: Job, snapshot: Snapshot) -> GasModel:
         if width is None
         else microturbulence_b(sigma=width.sigma, b=width.b, fwhm=width.fwhm),
         abundance=job.line.abundance,
-        bad_cells="stop" if gas.bad_cells == "stop" else "clip",
+        bad_cells=gas.bad_cells,
     )
 
 

@@ -20,7 +20,7 @@ class BadCells:
     Attributes
     ----------
     field : stored field, or fields, the value comes from.
-    reason : "not finite" or "not positive".
+    reason : "not finite", "negative" or "not positive".
     count : leaf cells.
     first : index of the first of them, from the patch's own corner.
     value : what was found there, in cgs.
@@ -40,13 +40,14 @@ class BadCells:
 
 
 def find_bad(
-    quantities: list[tuple[str, FloatArray, bool]], leaf: BoolArray | None
+    quantities: list[tuple[str, FloatArray, str]], leaf: BoolArray | None
 ) -> tuple[tuple[BadCells, ...], BoolArray]:
     """List what is wrong with each quantity, and where anything is.
 
     Parameters
     ----------
-    quantities : list of (name, values, must be positive)
+    quantities : list of (name, values, limit)
+        What is bad besides values that are not finite: "negative" ones, those "not positive", or "" for none.
     leaf : ndarray of bool, optional
         Cells that count; by default all.
 
@@ -58,11 +59,12 @@ def find_bad(
     """
     findings = []
     bad = np.zeros(quantities[0][1].shape, dtype=bool)
-    for name, values, positive in quantities:
+    for name, values, limit in quantities:
         strange = ~np.isfinite(values)
         wrong = [("not finite", strange)]
-        if positive:
-            wrong.append(("not positive", ~strange & (values <= 0.0)))
+        if limit:
+            low = values < 0.0 if limit == "negative" else values <= 0.0
+            wrong.append((limit, ~strange & low))
         for reason, where in wrong:
             bad |= where
             counted = where if leaf is None else where & leaf
@@ -80,6 +82,6 @@ def refuse(findings: tuple[BadCells, ...], where: str) -> None:
     raise GasError(
         place
         + "; ".join(str(finding) for finding in findings)
-        + ". Wanted finite values, and density and temperature above 0, in every leaf cell; "
-        'with the policy "clip" such cells are made transparent and counted'
+        + ". Wanted finite values, a density of 0 or more and a temperature above 0 in every leaf cell; "
+        'bad_cells = "clear" makes such cells transparent and counts them'
     )

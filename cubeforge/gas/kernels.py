@@ -21,7 +21,8 @@ def gas_state(  # type: ignore[no-untyped-def]
     last three are momenta, v = m / rho. leaf: (cells,) bool, or empty: all are. per_gram: molecules per gram.
     state: (6, cells) float64, out. Returns the bad leaf cells, and all bad cells.
 
-    A cell is bad when its density or temperature is not positive or any of its fields not finite.
+    A cell is bad when its density is negative, its temperature not positive or any of its fields not finite. A cell
+    without gas is not, whatever else it holds: that enters nothing, and is replaced where it is no number.
     """
     bad_leaves = bad = 0
     density, thermal, vx, vy, vz = fields
@@ -43,6 +44,11 @@ def gas_state(  # type: ignore[no-untyped-def]
                 t = INERT_TEMPERATURE
             if from_momentum:
                 x = y = z = 0.0
+        if rho == 0.0:
+            t = t if t > 0.0 and t - t == 0.0 else INERT_TEMPERATURE
+            x = x if x - x == 0.0 else 0.0
+            y = y if y - y == 0.0 else 0.0
+            z = z if z - z == 0.0 else 0.0
         state[0, i] = rho
         state[1, i] = t
         state[2, i] = x
@@ -50,7 +56,7 @@ def gas_state(  # type: ignore[no-untyped-def]
         state[4, i] = z
         state[5, i] = rho * per_gram
         # Comparisons with NaN are False, and differences of infinities NaN.
-        if rho > 0.0 and t > 0.0 and rho - rho + t - t + x - x + y - y + z - z == 0.0:
+        if rho >= 0.0 and t > 0.0 and rho - rho + t - t + x - x + y - y + z - z == 0.0:
             continue
         bad += 1
         if len(leaf) == 0 or leaf[i]:

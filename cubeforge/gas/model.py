@@ -102,7 +102,7 @@ class GasModel:
     mean_molecular_weight : mass per particle in units of the hydrogen atom's; serves pressure -> temperature
     only. microturbulence_b : Doppler parameter of unresolved motion, cm/s.
     abundance : molecules of the traced species per H2.
-    bad_cells : "stop" at a leaf cell with a bad value, or "clip": make it transparent and report it.
+    bad_cells : "stop" at a leaf cell with a bad value, or "clear": make it transparent and report it.
 
     Raises
     ------
@@ -119,7 +119,7 @@ class GasModel:
     mean_molecular_weight: float = 2.33
     microturbulence_b: float = 0.0
     abundance: float = 1e-4
-    bad_cells: Literal["stop", "clip"] = "stop"
+    bad_cells: Literal["stop", "clear"] = "stop"
 
     def __post_init__(self) -> None:
         for one, other in (("temperature", "pressure"), ("velocity", "momentum")):
@@ -137,8 +137,8 @@ class GasModel:
                 raise GasError(f"gas: {name} = {value}; wanted a number above {low:g} and up to {high:g}")
         if not (math.isfinite(self.microturbulence_b) and self.microturbulence_b >= 0.0):
             raise GasError(f"gas: microturbulence_b = {self.microturbulence_b} cm/s; wanted 0 or more")
-        if self.bad_cells not in ("stop", "clip"):
-            raise GasError(f'gas: bad_cells = {self.bad_cells!r}; wanted "stop" or "clip"')
+        if self.bad_cells not in ("stop", "clear"):
+            raise GasError(f'gas: bad_cells = {self.bad_cells!r}; wanted "stop" or "clear"')
         for name in ("density", "temperature", "pressure"):
             source = getattr(self, name)
             if isinstance(source, Constant) and source.value <= 0.0:
@@ -246,9 +246,9 @@ class GasModel:
         derived = f"temperature (from {names[1]} and {names[0]})" if self.temperature is None else names[1]
         findings, bad = find_bad(
             [
-                (names[0], state.density, True),
-                (derived, state.temperature, True),
-                *((name, v, False) for name, v in zip(names[2:], state.velocity, strict=True)),
+                (names[0], state.density, "negative"),
+                (derived, state.temperature, "not positive"),
+                *((name, v, "") for name, v in zip(names[2:], state.velocity, strict=True)),
             ],
             leaf,
         )

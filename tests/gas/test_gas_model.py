@@ -115,8 +115,7 @@ def test_temperature_from_pressure():
 
 
 BAD = [
-    ("rho", 0.0, "rho is not positive in 1 leaf cell, first at \\(1, 2, 3\\)"),
-    ("rho", -1.0, "not positive"),
+    ("rho", -1.0, "rho is negative in 1 leaf cell, first at \\(1, 2, 3\\)"),
     ("rho", np.nan, "rho is not finite"),
     ("T", 0.0, "T is not positive"),
     ("T", np.inf, "T is not finite"),
@@ -137,7 +136,7 @@ def test_bad_leaf_cells_stop_or_are_made_transparent_and_covered_ones_do_neither
     with pytest.raises(GasError, match="patch 7 of level 2"):
         gas.state(fields, np.ones((3, 4, 5), dtype=bool), where="patch 7 of level 2")
 
-    clipped = GasModel(StoredField("rho"), StoredField("T"), MOVING, bad_cells="clip").state(fields)
+    clipped = GasModel(StoredField("rho"), StoredField("T"), MOVING, bad_cells="clear").state(fields)
     assert clipped.mended_cells == 1
     assert [(f.field, f.count, f.first) for f in clipped.mended] == [(field, 1, (1, 2, 3))]
     assert clipped.density[1, 2, 3] == 0.0
@@ -160,6 +159,19 @@ def test_bad_leaf_cells_stop_or_are_made_transparent_and_covered_ones_do_neither
     assert np.isfinite(covered.temperature).all()
 
 
+@pytest.mark.parametrize("thermal", [{"temperature": StoredField("T")}, {"pressure": StoredField("T")}])
+def test_cells_without_gas_are_no_mistake(thermal):
+    fields = raw("rho", "T", "vx", "vy", "vz")
+    fields["rho"][1, 2, 3] = 0.0
+    fields["T"][1, 2, 3] = 0.0
+    fields["vx"][1, 2, 3] = np.nan
+    state = GasModel(StoredField("rho"), velocity=MOVING, **thermal).state(fields)
+    assert state.mended == ()
+    assert state.n_molecule[1, 2, 3] == state.density[1, 2, 3] == 0.0
+    assert np.isfinite(state.temperature).all()
+    assert np.isfinite(state.velocity[0]).all()
+
+
 def test_every_kind_of_bad_value_is_listed_with_its_count_and_first_place():
     fields = raw("rho", "T")
     fields["rho"][0, 0, 1] = fields["rho"][2, 0, 0] = -1.0
@@ -167,11 +179,11 @@ def test_every_kind_of_bad_value_is_listed_with_its_count_and_first_place():
     fields["T"][2, 0, 0] = 0.0
     leaf = np.ones((3, 4, 5), dtype=bool)
     leaf[0, 0, 1] = False
-    state = model(temperature=StoredField("T"), bad_cells="clip").state(fields, leaf)
+    state = model(temperature=StoredField("T"), bad_cells="clear").state(fields, leaf)
     found = [(f.field, f.reason, f.count, f.first) for f in state.mended]
     assert found == [
         ("rho", "not finite", 1, (1, 1, 1)),
-        ("rho", "not positive", 1, (2, 0, 0)),
+        ("rho", "negative", 1, (2, 0, 0)),
         ("T", "not positive", 1, (2, 0, 0)),
     ]
     assert state.mended_cells == 2
@@ -179,9 +191,9 @@ def test_every_kind_of_bad_value_is_listed_with_its_count_and_first_place():
 
 def test_bad_density_under_pressure_and_momentum_leaves_nothing_strange():
     fields = raw("rho", "P", "mx", "my", "mz")
-    fields["rho"][0, 0, 0] = 0.0
+    fields["rho"][0, 0, 0] = -1.0
     momentum = (StoredField("mx"), StoredField("my"), StoredField("mz"))
-    gas = GasModel(StoredField("rho"), pressure=StoredField("P"), momentum=momentum, bad_cells="clip")
+    gas = GasModel(StoredField("rho"), pressure=StoredField("P"), momentum=momentum, bad_cells="clear")
     state = gas.state(fields)
     assert [(f.field, f.count) for f in state.mended] == [("rho", 1)]
     assert [float(v[0, 0, 0]) for v in state.velocity] == [0.0, 0.0, 0.0]

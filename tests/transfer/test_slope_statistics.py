@@ -6,10 +6,9 @@ import math
 
 import numpy as np
 import pytest
-from support.flows import Flow, flow_snapshot, uniform
 from support.grids import grid_snapshot
 from support.jobs import make_job
-from support.physics import CO, KM_S
+from support.physics import CO, KM_S, PARSEC
 from support.sweeps import excess, opacity_of
 
 from cubeforge.engine.setup import build_setup
@@ -48,7 +47,7 @@ def row_job(co_file: str, **march) -> dict:
     )
 
 
-def row(speed) -> object:
+def row(speed):
     """Eight cells along x."""
     fields = {"density": WEIGHTS[:, None, None], "speed": np.asarray(speed, dtype=float)[:, None, None]}
     return grid_snapshot(fields, (1.0, 1.0, 1.0))
@@ -60,7 +59,7 @@ LIMITED = [
     # Flat cells beside a jump; the two beside it have steps of 0 and 1.
     ("monotonised central", [0, 0, 0, 0, 1, 1, 1, 1], [3, 4]),
     # Steps of 1 and 2: the mean, 1.5, is below twice the smaller. Of 1 and 4: 2.5 is not.
-    ("monotonised central", [0, 0, 1, 3, 5, 6, 10, 10], [1, 2 + 4 - 1, 6]),
+    ("monotonised central", [0, 0, 1, 3, 5, 6, 10, 10], [1, 5, 6]),
     ("minmod", [0, 0, 1, 3, 5, 6, 10, 10], [1, 2, 4, 5, 6]),
     # At the tip of a sawtooth of even steps the mean step is 0, as the slope is; of steps 2 and -1 it is not.
     ("monotonised central", [0, 0, 1, 2, 1, 0, 0, 0], [1, 5]),
@@ -73,7 +72,7 @@ def test_emission_of_limited_cells(co_file: str, limiter: str, speed, limited: l
     found = statistics(row_job(co_file, limiter=limiter), row(speed))
     assert cells_in(found["cell_emission_limited"] / found["cell_emission"]) == limited
     # Volume, times opacity (1/s) times the brightness of opaque gas.
-    emitted = float(opacity_of(WEIGHTS.sum(), KELVIN)) / 3.0856775814913673e18 * excess(KELVIN)
+    emitted = float(opacity_of(WEIGHTS.sum(), KELVIN)) / PARSEC * excess(KELVIN)
     assert found["cell_emission"] == pytest.approx(emitted, rel=1e-6)
 
 
@@ -86,7 +85,7 @@ def test_nothing_is_limited_without_slopes(co_file: str):
 
 @pytest.mark.parametrize("slant", [0.0, 0.75])
 def test_emission_of_steep_crossings(co_file: str, slant: float):
-    # Steps, in line widths, from cell to cell; a cell's change is the mean of two, or twice the smaller if that is less.
+    # Steps, in line widths, from cell to cell; a cell's change is the mean of two or twice the smaller.
     steps = np.array([0.0, 0.8, 1.0, 1.3, 2.2, 0.4, 0.2, 0.0])
     speed = np.cumsum(steps) * WIDTH
     # By hand:       edge  .8&1. 1&1.3 1.3&2.2 2.2&.4 .4&.2 .2&0 edge (cell i has steps i and i + 1)
@@ -95,20 +94,11 @@ def test_emission_of_steep_crossings(co_file: str, slant: float):
     job = row_job(co_file)
     cosine = 1.0 / math.hypot(1.0, slant)
     job["view"].update(toward=[1.0, slant, 0.0], pixel="0.01 pc")
-    fields = {
-        "density": np.repeat(WEIGHTS[:, None, None], 40, axis=1),
-        "speed": np.repeat(speed[:, None, None], 40, axis=1),
-    }
-    snapshot = grid_snapshot(fields, (1.0, 1.0, 1.0))
-    if slant:
-        # One cell across and wide enough, so that no face along y cuts a crossing.
-        fields = {"density": WEIGHTS[:, None, None], "speed": speed[:, None, None]}
-        snapshot = grid_snapshot(fields, (1.0, 100.0, 1.0))
-    found = statistics(job, snapshot)
-    assert (
-        cells_in(found["emission_steep"] / found["emission"])
-        == np.flatnonzero(change * cosine > 1.0).tolist()
-    )
+    # Cells wide enough along y for no face there to cut a crossing.
+    fields = {"density": WEIGHTS[:, None, None], "speed": speed[:, None, None]}
+    found = statistics(job, grid_snapshot(fields, (1.0, 100.0, 1.0)))
+    steep = np.flatnonzero(change * cosine > 1.0).tolist()
+    assert cells_in(found["emission_steep"] / found["emission"]) == steep
     # Emission is summed over rays (one), in kelvins times channels of 0.1 km/s.
     wanted = float(opacity_of(WEIGHTS.sum(), KELVIN)) / cosine * excess(KELVIN) / (0.1 * KM_S)
     assert found["emission"] == pytest.approx(wanted, rel=1e-5)
