@@ -133,25 +133,16 @@ class PatchMaker:
         state = setup.gas.state(self._raw.read(patch, self._fields), leaf, where)
         kappa, emis = setup.excitation.coefficients(state.n_molecule, state.temperature)
         velocity = self._along(state.velocity) + self._systemic
-        slopes, limited = None, np.zeros(0, dtype=bool)
+        slopes = None
         if setup.job.march.reconstruction == "linear":
-            found = velocity_slopes(self._with_ghosts(patch, state), setup.job.march.limiter)
-            slopes, limited = found.values, found.limited
+            slopes = velocity_slopes(self._with_ghosts(patch, state), setup.job.march.limiter)
         line = LineCells(kappa, emis, state.temperature, self._thermal, setup.gas.microturbulence_b**2)
-        cells, narrow = pack_cells(
-            state.density,
-            velocity,
-            slopes,
-            [line],
-            setup.band,
-            setup.unit_cm,
-            narrowest=setup.narrowest,
-            leaf=leaf,
-        )
+        cells, found = pack_cells(
+            state.density, velocity, slopes, [line], setup.band, setup.unit_cm, narrowest=setup.narrowest, leaf=leaf
+        )  # fmt: skip
         volume = float(np.prod(setup.hierarchy.cell_size[setup.hierarchy.level[patch]]))
-        emitted = np.where(leaf, np.abs(emis), 0.0) * volume
-        counts = [state.mended_cells, narrow, self._raw.take_count(), emitted.sum()]
-        counts.append(emitted[limited].sum() if limited.size else 0.0)
+        emission = (found.emission * volume, found.emission_limited * volume)
+        counts = (state.mended_cells, found.narrow, self._raw.take_count(), *emission)
         return cells, np.array(counts, dtype=np.float64)
 
     def _along(self, velocity: Sequence[FloatArray]) -> FloatArray:

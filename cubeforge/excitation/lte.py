@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
@@ -79,8 +80,8 @@ class LteExcitation:
             Shapes that differ; densities that are not finite numbers from 0 up; temperatures outside `t_low`
             to `t_high` where there are molecules, with their count and range.
         """
-        density = np.ascontiguousarray(n_mol, dtype=np.float64)
-        kelvin = np.ascontiguousarray(temperature, dtype=np.float64)
+        density, kelvin = np.asarray(n_mol, dtype=np.float64), np.asarray(temperature, dtype=np.float64)
+        order: Literal["C", "F"] = "F" if density.flags.f_contiguous and kelvin.flags.f_contiguous else "C"
         if np.shape(n_mol) != np.shape(temperature):
             raise ExcitationError(
                 f"{self.line}: densities of shape {np.shape(n_mol)}, "
@@ -88,8 +89,8 @@ class LteExcitation:
             )
         kappa, emis = np.empty(density.size), np.empty(density.size)
         bad = lte_coefficients(
-            density.ravel(),
-            kelvin.ravel(),
+            density.ravel(order=order),
+            kelvin.ravel(order=order),
             self._table,
             np.uint64(FRACTION_BITS - self._bits),
             np.uint64(self._first),
@@ -101,7 +102,7 @@ class LteExcitation:
         )
         if bad:
             raise ExcitationError(self._problem(density, kelvin))
-        return kappa.reshape(np.shape(n_mol)), emis.reshape(np.shape(n_mol))
+        return kappa.reshape(density.shape, order=order), emis.reshape(density.shape, order=order)
 
     def at(self, temperature: float) -> tuple[float, float]:
         """Opacity (cm^3/s) and emission (K cm^3/s) per molecule at one temperature."""

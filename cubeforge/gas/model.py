@@ -204,11 +204,13 @@ class GasModel:
         shape = next(a.shape for a in arrays if a is not None)
         if leaf is not None and leaf.shape != shape:
             raise GasError(f"{where or 'gas'}: leaf mask of shape {leaf.shape}, fields of {shape}")
+        # Readers give Fortran order (x fastest); whatever they give is kept, since turning it round costs most.
+        order: Literal["C", "F"] = "F" if all(a is None or a.flags.f_contiguous for a in arrays) else "C"
         dtype = np.float32 if all(a is None or a.dtype == np.float32 for a in arrays) else np.float64
         inputs, steps, factors = [], [], []
         for source, array in zip(self._sources, arrays, strict=True):
             # a constant is an array of one 1, so that its value is not rounded to float32
-            inputs.append(np.ones(1, dtype) if array is None else np.ascontiguousarray(array, dtype).ravel())
+            inputs.append(np.ones(1, dtype) if array is None else np.asarray(array, dtype).ravel(order=order))
             steps.append(0 if array is None else 1)
             factors.append(source.value if isinstance(source, Constant) else source.factor)
         state = np.empty((6, math.prod(shape)))
@@ -218,12 +220,12 @@ class GasModel:
             np.array(factors),
             self.temperature is None,
             self.velocity is None,
-            np.empty(0, dtype=bool) if leaf is None else np.ascontiguousarray(leaf).ravel(),
+            np.empty(0, dtype=bool) if leaf is None else leaf.ravel(order=order),
             self.molecules_per_gram,
             self.mean_molecular_weight * M_H / K_B,
             state,
         )
-        density, temperature, vx, vy, vz, molecules = (row.reshape(shape) for row in state)
+        density, temperature, vx, vy, vz, molecules = (row.reshape(shape, order=order) for row in state)
         result = GasState(density, temperature, (vx, vy, vz), molecules)
         return self._mend(result, leaf, where, bad_leaves) if bad else result
 

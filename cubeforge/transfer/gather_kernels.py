@@ -1,6 +1,7 @@
 """From the cells that a ray crosses to what the channels need: optical depth, energy, velocity and width.
 
-A cell is ``CELL_HEAD + CELL_LINE * lines`` float32: line-of-sight velocity in channels from the middle of the band,
+Cells of a patch lie one after the other, x fastest as the files have them. A cell is ``CELL_HEAD + CELL_LINE * lines``
+float32: line-of-sight velocity in channels from the middle of the band,
 its change per cell along x, y and z, mass density (g/cm2 per unit of depth), then for each line 1/b (per channel),
 opacity and emission above the background (integrated over velocity, in channels, per unit of depth).
 """
@@ -103,7 +104,8 @@ def put_entry(v: float, inv_b: float, tau: float, energy: float, half: float, sq
 
 @njit(**_opts)
 def put_cut_crossing(cell: Array, at: int, line: int, v: float, half_span: float, pieces: int, length: float,
-                     channels: int, reach: float, cut: float, n: int, values: Array, windows: Array) -> bool:  # fmt: skip
+                     channels: int, reach: float, cut: float, n: int, values: Array,
+                     windows: Array) -> bool:  # fmt: skip
     """Write one line of a crossing along which the velocity changes, in `pieces` entries from `n` on.
 
     `v` is the velocity at the crossing's middle from channel 0, `half_span` its change from there to the far end. Each

@@ -142,7 +142,7 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     rect : float64, shape (patches, 4)
         Each patch's rectangle on the sky in pixels: x low, x high, y low, y high.
     address : int64, shape (patches,)
-        Where each patch's cells are: float32, C order; see `gather_kernels` for a cell's numbers.
+        Where each patch's cells are: float32; see `gather_kernels` for a cell's numbers.
     lines, shifts : int; float64, shape (lines,)
         Lines a cell holds, and the velocity of each against the first, in channels.
     nodes, weights : float64, shape (n,)

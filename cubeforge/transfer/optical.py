@@ -19,18 +19,28 @@ LIMITERS = {"monotonised central": CENTRAL, "minmod": MINMOD}
 
 @dataclass(frozen=True)
 class Slopes:
-    """Change of the line-of-sight velocity across each cell of a patch.
+    """Change of the line-of-sight velocity across each cell of a patch; cells in flat order, x fastest.
 
     Attributes
     ----------
-    values : ndarray, shape (3, nx, ny, nz)
+    values : ndarray, shape (3, cells)
         cm/s per cell along x, y, z.
-    limited : ndarray of bool, shape (nx, ny, nz)
+    limited : ndarray of bool, shape (cells,)
         Cells where the limiter acted.
     """
 
     values: FloatArray
     limited: npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class PatchCounts:
+    """What was counted over the leaf cells of a patch: lines narrower than planned for; thin emission (K/s, summed over
+    cells), all of it and from cells where the limiter acted."""
+
+    narrow: int
+    emission: float
+    emission_limited: float
 
 
 @dataclass(frozen=True)
@@ -58,24 +68,26 @@ class LineCells:
 
 def velocity_slopes(velocity: FloatArray, limiter: str) -> Slopes:
     """Limited slopes from velocities with one layer of ghost cells, shape (nx + 2, ny + 2, nz + 2)."""
-    shape = tuple(n - 2 for n in velocity.shape)
-    values, limited = np.empty((3, *shape)), np.empty(shape, dtype=bool)
-    limited_slopes(velocity, LIMITERS[limiter], values, limited)
+    cells = int(np.prod([n - 2 for n in velocity.shape]))
+    values, limited = np.empty((3, cells)), np.empty(cells, dtype=bool)
+    limited_slopes(np.ascontiguousarray(velocity), LIMITERS[limiter], values, limited)
     return Slopes(values, limited)
 
 
 def pack_cells(
     density: FloatArray,
     velocity: FloatArray,
-    slopes: FloatArray | None,
+    slopes: Slopes | None,
     lines: list[LineCells],
     band: Band,
     unit_cm: float,
     *,
     narrowest: float = 0.0,
     leaf: npt.NDArray[np.bool_] | None = None,
-) -> tuple[npt.NDArray[np.float32], int]:
+) -> tuple[npt.NDArray[np.float32], PatchCounts]:
     """Write a patch as the march reads it; see `gather_kernels` for the layout.
+
+    Arrays in Fortran order, as readers give them, are not copied.
 
     Parameters
     ----------
@@ -83,8 +95,8 @@ def pack_cells(
         Mass density, g/cm3; cells of zero opacity, emission and density are transparent.
     velocity : ndarray, shape (nx, ny, nz)
         Line-of-sight velocity of the first line, cm/s, receding positive.
-    slopes : ndarray, shape (3, nx, ny, nz), optional
-        Its change across each cell, cm/s; none for a velocity that is constant in each cell.
+    slopes : Slopes, optional
+        Its change across each cell; none for a velocity that is constant in each cell.
     lines : list of LineCells
     unit_cm : float
         Unit of depth in cm.
@@ -95,22 +107,27 @@ def pack_cells(
 
     Returns
     -------
-    cells : ndarray, shape (nx, ny, nz, CELL_HEAD + CELL_LINE * len(lines)), float32
-    narrow : int
-        Lines in leaf cells that are narrower than `narrowest`.
+    cells : ndarray, shape (nz, ny, nx, CELL_HEAD + CELL_LINE * len(lines)), float32
+    counts : PatchCounts
     """
     out = np.empty((density.size, CELL_HEAD + CELL_LINE * len(lines)), dtype=np.float32)
-    flat_slopes = np.empty((3, 0)) if slopes is None else np.ascontiguousarray(slopes).reshape(3, -1)
-    pack_head(_flat(density), _flat(velocity), flat_slopes, band.middle, band.width, unit_cm, out)
-    counted = np.ones(density.size, dtype=bool) if leaf is None else np.ascontiguousarray(leaf).ravel()
-    narrow = 0
+    none = np.empty(0, dtype=bool)
+    values, limited = (np.empty((3, 0)), none) if slopes is None else (slopes.values, slopes.limited)
+    pack_head(_flat(density), _flat(velocity), values, band.middle, band.width, unit_cm, out)
+    counted = none if leaf is None else leaf.ravel(order="F")
+    narrow, emission, emission_limited = 0, 0.0, 0.0
     for index, line in enumerate(lines):
-        narrow += pack_line(
+        found = pack_line(
             CELL_HEAD + CELL_LINE * index, _flat(line.kappa), _flat(line.emis), _flat(line.temperature),
-            line.thermal, line.turbulence, band.width, unit_cm, narrowest, counted, out,
+            line.thermal, line.turbulence, band.width, unit_cm, narrowest, counted, limited, out,
         )  # fmt: skip
-    return out.reshape(*density.shape, -1), narrow
+        narrow, emission, emission_limited = (
+            narrow + found[0],
+            emission + found[1],
+            emission_limited + found[2],
+        )
+    return out.reshape(*density.shape[::-1], -1), PatchCounts(narrow, emission, emission_limited)
 
 
 def _flat(array: FloatArray) -> FloatArray:
-    return np.ascontiguousarray(array, dtype=np.float64).ravel()
+    return np.asarray(array, dtype=np.float64).ravel(order="F")

@@ -32,9 +32,9 @@ def limited_slopes(v: Array, limiter: int, slopes: Array, limited: Array) -> Non
     ----------
     v : float64, shape (nx + 2, ny + 2, nz + 2)
         With one layer of ghost cells.
-    slopes : float64, shape (3, nx, ny, nz), out
-        In units of `v` per cell.
-    limited : bool, shape (nx, ny, nz), out
+    slopes : float64, shape (3, cells), out
+        In units of `v` per cell; cells x fastest.
+    limited : bool, shape (cells,), out
         Whether the limiter changed a slope by more than a hundredth of the larger step.
     """
     nx, ny, nz = v.shape[0] - 2, v.shape[1] - 2, v.shape[2] - 2
@@ -42,16 +42,17 @@ def limited_slopes(v: Array, limiter: int, slopes: Array, limited: Array) -> Non
         for j in range(ny):
             for k in range(nz):
                 here = v[i + 1, j + 1, k + 1]
+                cell = (k * ny + j) * nx + i
                 acted = False
                 for axis in range(3):
                     a, b, c = axis == 0, axis == 1, axis == 2
                     backward = here - v[i + 1 - a, j + 1 - b, k + 1 - c]
                     forward = v[i + 1 + a, j + 1 + b, k + 1 + c] - here
                     slope = limit(backward, forward, limiter)
-                    slopes[axis, i, j, k] = slope
+                    slopes[axis, cell] = slope
                     change = abs(slope - 0.5 * (backward + forward))
                     acted |= change > 0.01 * max(abs(backward), abs(forward))
-                limited[i, j, k] = acted
+                limited[cell] = acted
 
 
 @njit(**_opts)
@@ -81,8 +82,9 @@ def pack_head(density: Array, velocity: Array, slopes: Array, middle: float, wid
 
 @njit(**_opts)
 def pack_line(at: int, kappa: Array, emis: Array, temperature: Array, thermal: float, turbulence: float, width: float,
-              unit_cm: float, narrowest: float, leaf: Array, out: Array) -> int:  # fmt: skip
-    """Inverse width, opacity and emission of one line; returns the leaf cells narrower than `narrowest`.
+              unit_cm: float, narrowest: float, leaf: Array, limited: Array,
+              out: Array) -> tuple[int, float, float]:  # fmt: skip
+    """Inverse width, opacity and emission of one line; counts leaf cells.
 
     Parameters
     ----------
@@ -93,15 +95,27 @@ def pack_line(at: int, kappa: Array, emis: Array, temperature: Array, thermal: f
     temperature : float64, shape (cells,)
     thermal, turbulence : float
         b**2 = thermal * temperature + turbulence, (cm/s)**2.
+    leaf, limited : bool, shape (cells,) or (0,)
+        Cells that count (all, if empty); cells where the slope limiter acted (none, if empty).
+
+    Returns
+    -------
+    narrow : int
+        Leaf cells narrower than `narrowest`.
+    emission, emission_limited : float
+        Sum of abs(emis) over leaf cells, and over those where the limiter acted.
     """
     per_depth = unit_cm / width
-    narrow = 0
-    limit = (narrowest * (1.0 - 1e-6)) ** 2
+    narrow, emission, emission_limited = 0, 0.0, 0.0
+    least = (narrowest * (1.0 - 1e-6)) ** 2
     for cell in range(kappa.shape[0]):
         square = thermal * temperature[cell] + turbulence
         out[cell, at] = width / math.sqrt(square)
         out[cell, at + 1] = kappa[cell] * per_depth
         out[cell, at + 2] = emis[cell] * per_depth
-        if square < limit and leaf[cell]:
-            narrow += 1
-    return narrow
+        if leaf.shape[0] == 0 or leaf[cell]:
+            narrow += square < least
+            emission += abs(emis[cell])
+            if limited.shape[0] > 0 and limited[cell]:
+                emission_limited += abs(emis[cell])
+    return narrow, emission, emission_limited

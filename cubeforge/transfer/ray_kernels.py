@@ -170,13 +170,13 @@ def walls(origin: Array, direction: Array, inverse: Array, lo: Array, hi: Array,
     sign : tuple of 3 ints
         Direction of the walk along each axis.
     stride : tuple of 3 ints
-        What a step along each axis means in the patch's C order.
+        What a step along each axis means in the patch's flat order, x fastest.
     """
     step = (grid[0] * inverse[0], grid[1] * inverse[1], grid[2] * inverse[2])
     shift = (-origin[0] * inverse[0], -origin[1] * inverse[1], -origin[2] * inverse[2])
     sign = (1 if direction[0] > 0.0 else -1, 1 if direction[1] > 0.0 else -1, 1 if direction[2] > 0.0 else -1)
-    nz = hi[2] - lo[2]
-    stride = (sign[0] * (hi[1] - lo[1]) * nz, sign[1] * nz, sign[2] * 1)
+    nx = hi[0] - lo[0]
+    stride = (sign[0] * 1, sign[1] * nx, sign[2] * nx * (hi[1] - lo[1]))
     return (lo[0], lo[1], lo[2]), (hi[0], hi[1], hi[2]), step, shift, sign, stride
 
 
@@ -187,7 +187,7 @@ def enter(origin: Array, direction: Array, t: float, grid: Array, around: Any) -
     Returns
     -------
     tuple
-        Cell's index along x, y, z; its place in the patch's C order; depths at which the ray leaves it through the
+        Cell's index along x, y, z; its place in the patch's flat order; depths at which the ray leaves it through the
         faces of each axis.
     """
     low, high, step, shift, sign, _ = around
@@ -197,7 +197,7 @@ def enter(origin: Array, direction: Array, t: float, grid: Array, around: Any) -
     tx = (ix + (sign[0] > 0)) * step[0] + shift[0] if direction[0] != 0.0 else math.inf
     ty = (iy + (sign[1] > 0)) * step[1] + shift[1] if direction[1] != 0.0 else math.inf
     tz = (iz + (sign[2] > 0)) * step[2] + shift[2] if direction[2] != 0.0 else math.inf
-    cell = ((ix - low[0]) * (high[1] - low[1]) + (iy - low[1])) * (high[2] - low[2]) + (iz - low[2])
+    cell = ((iz - low[2]) * (high[1] - low[1]) + (iy - low[1])) * (high[0] - low[0]) + (ix - low[0])
     return ix, iy, iz, cell, tx, ty, tz
 
 
@@ -235,7 +235,7 @@ def trace(origin: Array, direction: Array, inverse: Array, t0: float, t1: float,
     lo, hi, grid : int64, shape (3,)
         The patch's corners in its level's index space; finest units per cell.
     cells : int64, shape (n,), out
-        Flat index of each cell crossed, in the patch's C order (x, y, z).
+        Flat index of each cell crossed, x fastest.
     ends : float64, shape (n + 1,), out
         Depths: crossing i reaches from ``ends[i]`` to ``ends[i + 1]``. Both want ``sum(hi - lo) + 1`` places, `ends`
         one more.

@@ -19,7 +19,7 @@
 
 typedef struct {
     int n, b, channels;
-    const float *const *patches; /* (n/b)^3 arrays of b^3 cells */
+    const float *const *patches; /* (n/b)^3 arrays of b^3 cells, x fastest */
     double direction[3], start[3], step_x[3], step_y[3], cut;
     int nx, ny;
 } Scene;
@@ -107,7 +107,7 @@ static int trace(const Scene *s, const double o[3], Crossing *out)
         if (end > t) {
             int b = s->b, px = i[0] / b, py = i[1] / b, pz = i[2] / b;
             const float *cell = s->patches[(px * g + py) * g + pz]
-                + (((i[0] - px * b) * b + (i[1] - py * b)) * b + (i[2] - pz * b)) * NUMBERS;
+                + (((i[2] - pz * b) * b + (i[1] - py * b)) * b + (i[0] - px * b)) * NUMBERS;
             float peak = (float)((end - t) * cell[5] * PER_SQRT_PI);
             Crossing *c = out + count;
             c->tau = cell[6] * peak;

@@ -76,7 +76,9 @@ def make_patches(mesh: Hierarchy, band: Band, window: int, depths: tuple[float, 
         kappa = depth * np.sqrt(np.pi) * b
         energy = kappa * rng.uniform(5.0, 20.0, v.shape)
         width = (b * rng.uniform(0.9, 1.1, v.shape)) ** 2
-        cells, _ = pack_cells(np.ones(v.shape), v, None, [LineCells(kappa, energy, width, 1.0, 0.0)], band, 1.0)
+        cells, _ = pack_cells(
+            np.ones(v.shape), v, None, [LineCells(kappa, energy, width, 1.0, 0.0)], band, 1.0
+        )
         patches.append(cells)
     return patches
 
@@ -140,7 +142,9 @@ def main() -> None:
                         seconds, crossings, image = run_numba(view, scene, band, patches)
                         runs["numba"].append(seconds)
                         for form in ("rays", "packets"):
-                            seconds, _, other = run_c(getattr(reference, f"march_{form}"), view, scene, band, patches)
+                            seconds, _, other = run_c(
+                                getattr(reference, f"march_{form}"), view, scene, band, patches
+                            )
                             runs[form].append(seconds)
                     best = {form: 1e9 * min(times) / crossings for form, times in runs.items()}
                     ratio = best["numba"] / min(best["rays"], best["packets"])
