@@ -15,6 +15,7 @@ from cubeforge.cube.ledger import TileRecord, read_ledger
 from cubeforge.cube.store import Cube, create_cube, open_cube
 from cubeforge.engine.batches import Batches
 from cubeforge.engine.executors import Executor, SerialExecutor, local_executor, scheduler_executor
+from cubeforge.engine.machine import free_memory
 from cubeforge.engine.order import z_order
 from cubeforge.engine.outside import allow_outside, check_outside, outside_share, totals
 from cubeforge.engine.plan import Plan, make_plan
@@ -156,15 +157,6 @@ def render(
                 )  # fmt: skip
                 _drive(executor, shared, left, done, lease, watch)
         return _finish(cube, setup, len(left), time.perf_counter() - began)
-
-
-def free_memory() -> int:
-    """Bytes of memory that this machine can give without swapping; respects a container's limit."""
-    from distributed.system import MEMORY_LIMIT  # costs 0.5 s at start-up
-
-    with open("/proc/meminfo") as file:
-        available = next(int(line.split()[1]) * 1024 for line in file if line.startswith("MemAvailable"))
-    return int(min(available, MEMORY_LIMIT))
 
 
 def begin(path: Path, plan: Plan) -> Path:
