@@ -301,7 +301,7 @@ class RaySection(_Section):
 class MarchSection(_Section):
     """How the velocity varies inside a cell: evenly, with limited slopes, or not at all."""
 
-    reconstruction: Literal["linear", "constant"] = "constant"
+    reconstruction: Literal["linear", "constant"] = "linear"
     limiter: Literal["monotonised central", "minmod"] = "monotonised central"
 
 
