@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import signal
 import traceback
 from dataclasses import asdict
 from pathlib import Path
@@ -41,11 +40,6 @@ class _Group(click.Group):
             traceback.print_exc()
         for line in message.splitlines():
             click.echo(f"cubeforge: {line}", err=True)
-
-
-def _stop_like_interrupt() -> None:
-    """Let SIGTERM, with which batch systems stop jobs, end a render as Ctrl-C does."""
-    signal.signal(signal.SIGTERM, lambda *_: signal.raise_signal(signal.SIGINT))
 
 
 @click.group(cls=_Group, context_settings={"help_option_names": ["-h", "--help"]})
@@ -116,14 +110,14 @@ def _memory(_: click.Context, __: click.Parameter, value: str | None) -> int | N
 def render(job: Path, workers: int, threads: int, memory: int | None, scheduler_file: Path | None, picture: bool,
            quiet: bool) -> None:  # fmt: skip
     """Render a JOB file into its cube; the same command goes on after an interruption."""
-    _stop_like_interrupt()
+    from cubeforge.engine.interrupts import stop_on_sigterm
     from cubeforge.engine.render import render as run
     from cubeforge.job import load_job
     from cubeforge.terminal import ProgressLine
     from cubeforge.terminal_pages import show_outcome
 
     loaded = load_job(job)
-    with ProgressLine(quiet=quiet) as line:
+    with stop_on_sigterm(), ProgressLine(quiet=quiet) as line:
         outcome = run(loaded, workers=workers, threads=threads, memory=memory,
                       scheduler_file=scheduler_file, watch=line.update)  # fmt: skip
     if picture:

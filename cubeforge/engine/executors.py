@@ -188,6 +188,15 @@ def _close(part: Any) -> None:
         part.close()
 
 
+def check_scheduler_file(scheduler_file: Path) -> None:
+    """Raise EngineError when the file with which workers of a scheduler are found is missing."""
+    if not scheduler_file.is_file():
+        raise EngineError(
+            f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first "
+            "(dask scheduler --scheduler-file ...), and workers"
+        )
+
+
 @contextlib.contextmanager
 def scheduler_executor(scheduler_file: Path) -> Iterator[DaskExecutor]:
     """Workers of a scheduler that is up already, found through its file.
@@ -199,10 +208,7 @@ def scheduler_executor(scheduler_file: Path) -> Iterator[DaskExecutor]:
     """
     from distributed import Client  # costs 0.5 s at start-up
 
-    if not scheduler_file.is_file():
-        raise EngineError(
-            f"{scheduler_file}: there is no such scheduler file; start a scheduler with it first"
-        )
+    check_scheduler_file(scheduler_file)
     with _quiet(), contextlib.ExitStack() as closing:
         try:
             client = Client(scheduler_file=str(scheduler_file), timeout=WAIT_FOR_SCHEDULER)

@@ -42,3 +42,13 @@ def hold_interrupts() -> Iterator[None]:
         # Whatever else went wrong in the block, went wrong because of it.
         if came.is_set():
             raise KeyboardInterrupt
+
+
+@contextlib.contextmanager
+def stop_on_sigterm() -> Iterator[None]:
+    """Let SIGTERM, with which batch systems end jobs, stop the block as Ctrl-C does; in the main thread only."""
+    before = signal.signal(signal.SIGTERM, lambda *_: signal.raise_signal(signal.SIGINT))
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)

@@ -14,7 +14,13 @@ from cubeforge.cube.lease import Lease
 from cubeforge.cube.ledger import TileRecord, read_ledger
 from cubeforge.cube.store import Cube, create_cube, open_cube
 from cubeforge.engine.batches import Batches
-from cubeforge.engine.executors import Executor, SerialExecutor, local_executor, scheduler_executor
+from cubeforge.engine.executors import (
+    Executor,
+    SerialExecutor,
+    check_scheduler_file,
+    local_executor,
+    scheduler_executor,
+)
 from cubeforge.engine.machine import free_memory
 from cubeforge.engine.order import z_order
 from cubeforge.engine.outside import allow_outside, check_outside, outside_share, totals
@@ -133,6 +139,8 @@ def render(
     """
     if not isinstance(job, Job):
         job = load_job(job)
+    if scheduler_file is not None:
+        check_scheduler_file(Path(scheduler_file))
     setup = build_setup(job)
     plan = make_plan(setup)
     if memory is None and scheduler_file is None:
