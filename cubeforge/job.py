@@ -147,7 +147,7 @@ class LineSection(_Section):
 
 
 _AXES = {
-    sign + name: tuple((1.0 if sign != "-" else -1.0) * (axis == name) for axis in "xyz")
+    sign + name: tuple((-1.0 if sign == "-" else 1.0) if axis == name else 0.0 for axis in "xyz")
     for sign in ("", "+", "-")
     for name in "xyz"
 }
