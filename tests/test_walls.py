@@ -46,7 +46,9 @@ def imported(file: Path) -> Iterator[str]:
         elif isinstance(node, ast.ImportFrom):
             assert node.level == 0, f"{file}: relative import"
             module = node.module or ""
-            yield from (f"cubeforge.{alias.name}" for alias in node.names) if module == "cubeforge" else (module,)
+            yield from (
+                (f"cubeforge.{alias.name}" for alias in node.names) if module == "cubeforge" else (module,)
+            )
 
 
 def room_of(file: Path) -> str:

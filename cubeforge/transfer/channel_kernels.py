@@ -99,18 +99,25 @@ def skew(square, fourth, sixth):  # type: ignore[no-untyped-def]
 
 
 @njit(**_inline)
-def cross_sharp(mode, state, at, stop, u, step, tau, energy):  # type: ignore[no-untyped-def]
-    """Velocities of the state from `at` to `stop`, u growing by `step`, for a Gaussian line."""
-    reach = u + step * float32((stop - at) // STEP)
+def cross_sharp(mode, state, at, stop, near, step, tau, energy):  # type: ignore[no-untyped-def]
+    """Velocities of the state from `at` to `stop` for a Gaussian line.
+
+    `near` is the first velocity less the line's, in channels, and `step` one channel in u. Every u is made from `near`
+    afresh: adding step by step would add up roundings.
+    """
+    channel = float32(0.0)
+    u = near * step
+    reach = (near + float32((stop - at) // STEP)) * step
     farthest = larger(u * u, reach * reach)
     if greatest(farthest) < float32(FARTHEST) and greatest(step) < float32(4.0):
         double = step * step
         growth = exp2_minus(double + double)
         while at < stop:
             end = min(at + RESTART * STEP, stop)
+            u = (near + channel) * step
             p = exp2_minus(u * u)
             ratio = exp2_minus(fma(u + u, step, double))
-            u = fma(step, float32(RESTART), u)
+            channel += float32(RESTART)
             while at < end:
                 pass_light(mode, state, at, tau * p, energy * p)
                 p = p * ratio
@@ -118,22 +125,25 @@ def cross_sharp(mode, state, at, stop, u, step, tau, energy):  # type: ignore[no
                 at += STEP
     else:
         while at < stop:
+            u = (near + channel) * step
             p = exp2_minus(u * u)
             pass_light(mode, state, at, tau * p, energy * p)
-            u = u + step
+            channel += float32(1.0)
             at += STEP
 
 
 @njit(**_inline)
-def cross_wide(mode, state, at, stop, u, step, tau, energy, span):  # type: ignore[no-untyped-def]
+def cross_wide(mode, state, at, stop, near, step, tau, energy, span):  # type: ignore[no-untyped-def]
     """The same for a line whose velocity changes by a squared half `span` (in widths) within the crossing."""
     fourth = span * span * float32(-1.0 / 45.0)
     sixth = span * span * span * float32(128.0 / 45360.0)
+    channel = float32(0.0)
     while at < stop:
+        u = (near + channel) * step
         square = u * u
         p = exp2_minus(square) * skew(square, fourth, sixth)
         pass_light(mode, state, at, tau * p, energy * p)
-        u = u + step
+        channel += float32(1.0)
         at += STEP
 
 
@@ -162,20 +172,20 @@ def cross_row(rows, row, offsets, first, last, channels, state):  # type: ignore
         tau = larger(tau, float32(LEAST_TAU))
     tau = tau * _LOG2_E
     for node in range(offsets.shape[0]):
-        u = (v * float32(-1.0) + (float32(first) + offsets[node])) * step
+        near = v * float32(-1.0) + (float32(first) + offsets[node])
         at = (node * channels + first) * STEP
         stop = (node * channels + last) * STEP
         if sharp:
             if size < float32(0.05):
-                cross_sharp(THIN, state, at, stop, u, step, tau, energy)
+                cross_sharp(THIN, state, at, stop, near, step, tau, energy)
             elif size < float32(1.0):
-                cross_sharp(MODERATE, state, at, stop, u, step, tau, energy)
+                cross_sharp(MODERATE, state, at, stop, near, step, tau, energy)
             else:
-                cross_sharp(ANY, state, at, stop, u, step, tau, energy)
+                cross_sharp(ANY, state, at, stop, near, step, tau, energy)
         elif size < float32(0.05):
-            cross_wide(THIN, state, at, stop, u, step, tau, energy, span)
+            cross_wide(THIN, state, at, stop, near, step, tau, energy, span)
         else:
-            cross_wide(ANY, state, at, stop, u, step, tau, energy, span)
+            cross_wide(ANY, state, at, stop, near, step, tau, energy, span)
 
 
 @njit(**_opts)
@@ -216,15 +226,17 @@ def add_line(rows, base, offsets, first, last, channels, sums):  # type: ignore[
     fourth = span * span * float32(-1.0 / 45.0)
     sixth = span * span * span * float32(128.0 / 45360.0)
     for node in range(offsets.shape[0]):
-        u = (v * float32(-1.0) + (float32(first) + offsets[node])) * step
+        near = v * float32(-1.0) + (float32(first) + offsets[node])
         at = (node * channels + first) * STEP
         stop = (node * channels + last) * STEP
+        channel = float32(0.0)
         while at < stop:
+            u = (near + channel) * step
             square = u * u
             p = exp2_minus(square) * skew(square, fourth, sixth)
             store(sums, at, fma(tau, p, load(sums, at)))
             store(sums, at + LANES, fma(energy, p, load(sums, at + LANES)))
-            u = u + step
+            channel += float32(1.0)
             at += STEP
 
 
