@@ -11,13 +11,16 @@ from typing import Any, Protocol
 from cubeforge.cube.ledger import TileRecord
 from cubeforge.engine.batches import Batches
 from cubeforge.engine.interrupts import hold_interrupts
+from cubeforge.engine.machine import free_memory
 from cubeforge.engine.shared import BatchResult, forget, run_batch
-from cubeforge.errors import EngineError
+from cubeforge.errors import EngineError, PlanError
 
 WINDOW = 3
 """Batches under way for each thread: enough that none waits for the next."""
 WAIT_FOR_SCHEDULER = 60.0
 """Seconds to wait for a given scheduler to answer."""
+MEMORY_SHARE = 0.6
+"""Of a worker's memory limit, what patches and tiles get by default: dask pauses a worker at 0.8."""
 WAIT_FOR_WORKERS = 60.0
 """Seconds to wait for its first worker."""
 SILENT = logging.CRITICAL
@@ -30,6 +33,16 @@ class Executor(Protocol):
     @property
     def threads(self) -> int:
         """Threads of each worker process."""
+        ...
+
+    def usual_memory(self) -> int:
+        """Bytes that a worker may use for patches and tiles when nobody says how many.
+
+        Raises
+        ------
+        PlanError
+            Nobody can tell.
+        """
         ...
 
     def run(self, path: Path, batches: Batches) -> Iterator[list[TileRecord]]:
@@ -50,6 +63,10 @@ class SerialExecutor:
 
     threads = 1
 
+    def usual_memory(self) -> int:
+        """See `Executor`."""
+        return free_memory() * 3 // 4
+
     def run(self, path: Path, batches: Batches) -> Iterator[list[TileRecord]]:
         """See `Executor`."""
         try:
@@ -65,6 +82,16 @@ class DaskExecutor:
     def __init__(self, client: Any) -> None:
         self._client = client
         self.threads = max(each["nthreads"] for each in self._workers().values())
+
+    def usual_memory(self) -> int:
+        """Of what the smallest worker was started with, a share that leaves room for the program itself."""
+        limits = [int(each["memory_limit"] or 0) for each in self._workers().values()]
+        if min(limits) <= 0:
+            raise PlanError(
+                f"memory: workers of the scheduler at {self._client.scheduler.address} were started without a memory "
+                'limit; say what each may use for patches and tiles, such as --memory "2 GiB"'
+            )
+        return int(MEMORY_SHARE * min(limits))
 
     def _workers(self) -> dict[str, Any]:
         workers: dict[str, Any] = self._client.scheduler_info(n_workers=-1)["workers"]

@@ -126,7 +126,7 @@ def render(
         Threads of each.
     memory : int, optional
         Bytes that each worker may use for patches and tiles; by default three quarters of what the machine has
-        free, shared among the workers. With a scheduler, workers may differ: give the smallest.
+        free, shared among the workers, or a share of what the smallest worker of a scheduler was started with.
     scheduler_file : path, optional
         Use the workers of a dask scheduler that is up already.
     watch : callable, optional
@@ -158,6 +158,8 @@ def render(
         if len(left):
             systemic = systemic_velocity(setup)
             with _executor(workers, threads, Path(scheduler_file) if scheduler_file else None) as executor:
+                memory = memory or executor.usual_memory()
+                plan.share(memory, executor.threads)
                 shared = Shared(
                     job=job.raw, folder=job.folder, cube=str(path), run=lease.run,
                     fingerprint=plan.spec.fingerprint, systemic=systemic, memory=memory,
