@@ -23,9 +23,9 @@ NUMERICAL_VERSION = 1
 """Raised by every change of the code that changes pixels."""
 MAPS = (("column", "g cm-2"),)
 """By-products of every render."""
-BUILD_NUMBERS = 24
-"""Float64 numbers a cell that turning a patch into its optical form takes at the worst, measured
-(`tests/engine/test_memory.py`)."""
+BUILD_NUMBERS = {"constant": 15, "linear": 30}
+"""Float64 numbers a cell that turning a patch into its optical form takes at the most, by the kind of reconstruction:
+measured with stored momenta and pressure of 64 bits (`tests/memory/test_memory_budget.py`)."""
 TILES_LOOKED_AT, BLOCKS_LOOKED_AT = 2000, 16
 """Tiles with the most patches whose bytes are summed, and heaviest tiles whose blocks of pixels are."""
 
@@ -249,6 +249,6 @@ def make_plan(setup: Setup) -> Plan:
         tile_bytes=4 * 4 * channels * setup.tile**2 + 40 * channels * nodes,
         group_bytes=group,
         block_bytes=block,
-        build_bytes=8 * BUILD_NUMBERS * int(cells.max(initial=0)),
+        build_bytes=8 * BUILD_NUMBERS[setup.job.march.reconstruction] * int(cells.max(initial=0)),
         caveats=setup.caveats,
     )
