@@ -26,9 +26,12 @@ CELL = 0.125
 SLANT = (0.5, -0.3, 0.8)
 
 
-def check(found, wanted, depth: float) -> None:
-    """1e-5 of the peak up to a swept depth of 100; beyond, the far wings of the line's shape are seen: 6e-5."""
-    bound = 1e-5 if depth <= 100.0 else 6e-5
+def check(found, wanted, depth: float, far: bool = False) -> None:
+    """1e-5 of the peak up to a swept depth of 100; beyond, the far wings of the line's shape are seen: 6e-5.
+
+    So it is for velocities `far` from the band's middle, by a thousand widths: float32 places them to 7e-5 of a width.
+    """
+    bound = 1e-5 if depth <= 100.0 and not far else 6e-5
     np.testing.assert_allclose(found, wanted, rtol=0.0, atol=bound * np.abs(wanted).max())
 
 
@@ -139,7 +142,7 @@ def test_expanding_sphere(co_file: str, step: float, depth: float):
     wanted = -excess(KELVIN) * np.expm1(
         -swept_depth(channels, opacity, -rate * half, rate * half, 2.0 * half, WIDTH)
     )
-    check(image[:, 0], wanted, depth)
+    check(image[:, 0], wanted, depth, far=step > 100.0)
 
 
 @pytest.mark.parametrize("depth", [1e-4, 3.0])
