@@ -30,7 +30,9 @@ def flow_job(**sections) -> dict:
 def patch_slopes(job: dict, snapshot) -> list[np.ndarray]:
     """Change of the line-of-sight velocity across each cell along x, y, z, in channels: (nx, ny, nz, 3) each."""
     worker = TileWorker(build_setup(parse_job(job), snapshot))
-    return [worker.cache.get(patch)[..., 1:4] for patch in range(snapshot.hierarchy.patches)]
+    # Patches are kept with x fastest: z, y, x, numbers of a cell.
+    cells = [worker.cache.get(patch) for patch in range(snapshot.hierarchy.patches)]
+    return [each[..., 1:4].transpose(2, 1, 0, 3) for each in cells]
 
 
 def with_momentum(snapshot: MemorySnapshot) -> MemorySnapshot:
