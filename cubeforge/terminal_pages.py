@@ -92,6 +92,13 @@ def show_outcome(outcome: Outcome, picture: Path | None) -> None:
             f"{100 * sums['emission_steep'] / emission:.2g} % (velocity changes by more than b along the crossing)",
         ],
     ]
+    if outcome.sampling_error is not None:
+        rows.append(
+            [
+                "sampling error",
+                f"{100 * outcome.sampling_error:.2g} % of the brightest pixel (99 % of pixels have less)",
+            ]
+        )
     if sums["cell_emission_limited"]:
         share = 100 * sums["cell_emission_limited"] / max(sums["cell_emission"], 1e-300)
         rows.append(["from cells where the limiter acted", f"{share:.2g} %"])

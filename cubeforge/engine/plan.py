@@ -15,14 +15,15 @@ from cubeforge._version import VERSION
 from cubeforge.cube.spec import CubeSpec
 from cubeforge.engine.setup import Setup
 from cubeforge.errors import PlanError
+from cubeforge.job import Job
 from cubeforge.quantities import show_bytes
 from cubeforge.transfer.gather_kernels import CELL_HEAD, CELL_LINE
 from cubeforge.transfer.march_kernels import BLOCK
 
-NUMERICAL_VERSION = 1
+NUMERICAL_VERSION = 2
 """Raised by every change of the code that changes pixels."""
-MAPS = (("column", "g cm-2"),)
-"""By-products of every render."""
+COLUMN, INTEGRATED, SAMPLING_ERROR = "column", "integrated", "sampling_error"
+"""Names of by-products: mass column; brightness above the background, integrated over velocity; its sampling error."""
 BUILD_NUMBERS = {"constant": 15, "linear": 30}
 """Float64 numbers a cell that turning a patch into its optical form takes at the most, by the kind of reconstruction:
 measured with stored momenta and pressure of 64 bits (`tests/memory/test_memory_budget.py`)."""
@@ -190,6 +191,15 @@ def fingerprint_parts(setup: Setup) -> dict[str, str]:
     }
 
 
+def maps_of(job: Job) -> tuple[tuple[str, str], ...]:
+    """By-products of a render, name and unit."""
+    maps = [(COLUMN, "g cm-2")]
+    if job.rays.error:
+        unit = f"{job.output.brightness} km/s"
+        maps += [(INTEGRATED, unit), (SAMPLING_ERROR, unit)]
+    return tuple(maps)
+
+
 def cube_spec(setup: Setup) -> CubeSpec:
     """The cube that a setup will become."""
     parts = fingerprint_parts(setup)
@@ -212,7 +222,7 @@ def cube_spec(setup: Setup) -> CubeSpec:
         fingerprint=digest,
         fingerprint_parts=parts,
         absolute=job.output.background == "kept",
-        maps=MAPS,
+        maps=maps_of(job),
         history=(
             f"cubeforge {VERSION}",
             f"snapshot {setup.snapshot.path}",
@@ -241,12 +251,13 @@ def make_plan(setup: Setup) -> Plan:
         patches_of_tile=(int(counts[0]), int(counts[len(counts) // 2]), int(counts[-1])),
         read_bytes=int(setup.snapshot.read_bytes(patches, setup.gas.required_fields()).sum()),
         optical_bytes=int(cells.sum()) * cell_bytes(1),
-        cube_bytes=spec.intensity_bytes + 8 * len(MAPS) * ny * nx,
+        cube_bytes=spec.intensity_bytes + 8 * len(spec.maps) * ny * nx,
         fits_bytes=-(-spec.intensity_bytes // 2880) * 2880 + 2 * 2880,
         channels=channels,
         nodes=nodes,
-        # The image and its copies in the unit of the cube, compressed, and on the way to disk; a ray's state.
-        tile_bytes=4 * 4 * channels * setup.tile**2 + 40 * channels * nodes,
+        # The image and its copies in the unit of the cube, compressed, and on the way to disk, likewise the maps; a
+        # ray's state.
+        tile_bytes=(4 * 4 * channels + 8 * 4 * len(spec.maps)) * setup.tile**2 + 40 * channels * nodes,
         group_bytes=group,
         block_bytes=block,
         build_bytes=8 * BUILD_NUMBERS[setup.job.march.reconstruction] * int(cells.max(initial=0)),

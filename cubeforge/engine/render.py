@@ -25,6 +25,7 @@ from cubeforge.engine.machine import free_memory
 from cubeforge.engine.order import z_order
 from cubeforge.engine.outside import allow_outside, check_outside, outside_share, totals
 from cubeforge.engine.plan import Plan, make_plan
+from cubeforge.engine.sampling import sampling_error
 from cubeforge.engine.setup import Setup, build_setup
 from cubeforge.engine.shared import Shared, sweep_shared
 from cubeforge.engine.systemic import systemic_velocity
@@ -76,6 +77,9 @@ class Outcome:
     seconds : float
     outside : float
         Share of the (optically thin) line emission that falls outside the channels.
+    sampling_error : float or None
+        99th percentile over the pixels of what too few rays may have done to the integrated brightness, relative to its
+        largest value in the image; None when the job did not ask for it.
     totals : dict
         Sums of the tile statistics over the cube.
     caveats : tuple of str
@@ -86,6 +90,7 @@ class Outcome:
     rendered: int
     seconds: float
     outside: float
+    sampling_error: float | None
     totals: dict[str, float]
     caveats: tuple[str, ...]
 
@@ -230,7 +235,8 @@ def _finish(cube: Cube, setup: Setup, rendered: int, seconds: float) -> Outcome:
             f"{sums['narrow_cells']:.0f} cells have lines narrower than {setup.narrowest / 1e5:.3g} km/s, for which "
             "the samples in each channel were chosen"
         )
-    return Outcome(cube.path, cube.spec.tiles, rendered, seconds, outside, sums, tuple(caveats))
+    error = sampling_error(cube)
+    return Outcome(cube.path, cube.spec.tiles, rendered, seconds, outside, error, sums, tuple(caveats))
 
 
 __all__ = ["CubeforgeError", "Outcome", "Progress", "TileRecord", "render"]

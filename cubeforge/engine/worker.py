@@ -12,13 +12,13 @@ import numpy.typing as npt
 
 from cubeforge.engine.cache import Patch, PatchCache
 from cubeforge.engine.patches import PATCH_STATISTICS, PatchMaker
-from cubeforge.engine.plan import Plan, entry_bytes, make_plan, tile_area
+from cubeforge.engine.plan import COLUMN, INTEGRATED, SAMPLING_ERROR, Plan, entry_bytes, make_plan, tile_area
+from cubeforge.engine.sampling import sampling
 from cubeforge.engine.setup import Setup
-from cubeforge.quantities import JANSKY, planck, rayleigh_jeans_factor
+from cubeforge.quantities import JANSKY, KM_S, planck, rayleigh_jeans_factor
 from cubeforge.transfer.gather_kernels import STATISTICS
 from cubeforge.transfer.march_kernels import BLOCK, march_tile
 from cubeforge.transfer.pointers import addresses
-from cubeforge.transfer.view import rays_per_pixel
 
 Area = tuple[int, int, int, int]
 
@@ -86,6 +86,7 @@ class TileWorker:
         raw = cache // 4 if setup.job.march.reconstruction == "linear" else 0
         self._maker = PatchMaker(setup, self._systemic, raw)
         self._entry_bytes = entry_bytes(setup)
+        self._sampling = sampling(setup)
         self._counts = np.zeros((setup.hierarchy.patches, len(PATCH_STATISTICS)))
         self._read: list[float] = []
         self.cache = PatchCache(self._load, cache - raw)
@@ -113,37 +114,24 @@ class TileWorker:
         for part in parts:
             yield from self._groups(part)
 
-    def _rays(self, area: Area, entries: npt.NDArray[np.int64]) -> npt.NDArray[np.int32]:
-        x0, x1, y0, y1 = area
-        section = self.setup.job.rays
-        if section.per_side != "auto":
-            return np.full((y1 - y0, x1 - x0), section.per_side, dtype=np.int32)
-        scene = self.setup.scene
-        return rays_per_pixel(
-            self.setup.view,
-            scene.rect[entries],
-            scene.level[entries],
-            self.setup.level_cell,
-            area,
-            section.most,
-        )
-
     def _march(
         self, area: Area, entries: npt.NDArray[np.int64], statistics: npt.NDArray[Any]
-    ) -> tuple[Any, Any]:
-        """Image and column of one group of pixels, in kelvins above the background."""
+    ) -> tuple[Any, Any, Any]:
+        """Image, column and contrast of one group of pixels (see `march_tile`), in kelvins above the background."""
         scene, band = self.setup.scene, self.setup.band
         x0, x1, y0, y1 = area
         image = np.zeros((band.count, y1 - y0, x1 - x0), dtype=np.float32)
-        column = np.zeros((y1 - y0, x1 - x0))
+        column, contrast = np.zeros((2, y1 - y0, x1 - x0))
+        rays = self._sampling
         patches = [self.cache.get(int(patch)) for patch in scene.patch[entries]]
         march_tile(
-            np.array(area, dtype=np.int64), self._rays(area, entries), scene.start, scene.step_x, scene.step_y,
-            scene.direction, scene.box, scene.sphere, scene.cell, scene.lo[entries], scene.hi[entries],
-            scene.level[entries], scene.scale, scene.rect[entries], addresses(patches), 1, np.zeros(1),
-            band.nodes, band.weights, band.count, band.reach, band.cut, scene.longest, image, column, statistics,
+            np.array(area, dtype=np.int64), rays.lattice, rays.least, rays.most, rays.limit, scene.start,
+            scene.step_x, scene.step_y, scene.direction, scene.box, scene.sphere, scene.cell, scene.lo[entries],
+            scene.hi[entries], scene.level[entries], scene.scale, scene.rect[entries], addresses(patches), 1,
+            np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut, scene.longest, image, column,
+            contrast, statistics,
         )  # fmt: skip
-        return image, column
+        return image, column, contrast
 
     def render(self, tile: int) -> TileResult:
         """Render one tile.
@@ -155,14 +143,37 @@ class TileWorker:
         """
         x0, x1, y0, y1 = tile_area(self.setup, tile)
         image = np.zeros((self.setup.band.count, y1 - y0, x1 - x0), dtype=np.float32)
-        maps = np.zeros((1, y1 - y0, x1 - x0))
+        column, contrast = np.zeros((2, y1 - y0, x1 - x0))
         statistics = np.zeros(len(STATISTICS))
         for area, entries in self._groups((x0, x1, y0, y1)):
             rows, columns = slice(area[2] - y0, area[3] - y0), slice(area[0] - x0, area[1] - x0)
             if len(entries):
-                image[:, rows, columns], maps[0, rows, columns] = self._march(area, entries, statistics)
+                found = self._march(area, entries, statistics)
+                image[:, rows, columns], column[rows, columns], contrast[rows, columns] = found
         counted = self._patch_statistics(tile, (x0, x1, y0, y1))
+        maps = self._maps(image, column, contrast)
         return TileResult(self._in_unit(image), maps, (*statistics.tolist(), *counted.tolist()))
+
+    def _maps(
+        self, image: npt.NDArray[np.float32], column: npt.NDArray[Any], contrast: npt.NDArray[Any]
+    ) -> npt.NDArray[np.float64]:
+        """By-products in the order of the plan; `image` and `contrast` in kelvins above the background."""
+        per_channel = self._per_kelvin * self.setup.band.width / KM_S
+        known = {
+            COLUMN: column,
+            INTEGRATED: per_channel * image.sum(axis=0, dtype=np.float64),
+            SAMPLING_ERROR: per_channel * np.abs(contrast),
+        }
+        return np.stack([known[name] for name, _ in self.plan.spec.maps])
+
+    @property
+    def _per_kelvin(self) -> float:
+        """The cube's unit per kelvin of brightness."""
+        spec = self.plan.spec
+        if spec.unit == "K":
+            return 1.0
+        scale = 1.0 / (rayleigh_jeans_factor(spec.rest_frequency) * JANSKY)
+        return float(scale * spec.pixel_rad**2 if spec.unit == "Jy/pixel" else scale)
 
     def _patch_statistics(self, tile: int, area: Area) -> npt.NDArray[np.float64]:
         """`PATCH_STATISTICS` of the patches whose first tile this is; bytes as they were read, each told once."""
@@ -183,6 +194,5 @@ class TileWorker:
         if spec.absolute:
             image += np.float32(factor * planck(spec.rest_frequency, spec.background_K))
         if spec.unit != "K":
-            scale = 1.0 / (factor * JANSKY)
-            image *= np.float32(scale * spec.pixel_rad**2 if spec.unit == "Jy/pixel" else scale)
+            image *= np.float32(self._per_kelvin)
         return image

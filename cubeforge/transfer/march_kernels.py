@@ -20,6 +20,7 @@ from cubeforge.transfer.packet_kernels import (
     safe_target,
 )
 from cubeforge.transfer.ray_kernels import clip_to_region, inverse_of, overlay
+from cubeforge.transfer.subray_kernels import PACKET_SIDE, SQUARE, list_rays
 from cubeforge.transfer.vectors import LANES, flush_denormals, restore_denormals
 
 _opts = {"nogil": True, "cache": True, "error_model": "numpy"}
@@ -28,8 +29,6 @@ Array = Any
 BLOCK = 8
 """Pixels a side of the blocks that share one list of candidate patches; a tile is a whole number of them, except at
 the image's far edges."""
-PACKET_SIDE = 4
-"""Pixels a side of the smaller blocks whose rays make up packets."""
 
 
 @njit(**_opts)
@@ -40,23 +39,6 @@ def block_candidates(rect: Array, x0: int, x1: int, y0: int, y1: int, out: Array
         if rect[p, 0] < x1 and rect[p, 1] > x0 and rect[p, 2] < y1 and rect[p, 3] > y0:
             out[n] = p
             n += 1
-    return n
-
-
-@njit(**_opts)
-def list_rays(x0: int, x1: int, y0: int, y1: int, tile: Array, rays_per_side: Array, places: Array,
-              pixels: Array) -> int:  # fmt: skip
-    """Sub-rays of a small block in canonical order: where each is, in pixels, and which pixel it belongs to."""
-    n = 0
-    for y in range(y0, y1):
-        for x in range(x0, x1):
-            side = rays_per_side[y - tile[2], x - tile[0]]
-            for sub in range(side * side):
-                places[n, 0] = x + (sub % side + 0.5) / side
-                places[n, 1] = y + (sub // side + 0.5) / side
-                pixels[n, 0] = x - tile[0]
-                pixels[n, 1] = y - tile[2]
-                n += 1
     return n
 
 
@@ -117,11 +99,11 @@ def march_packet(rays: int, origins: Array, direction: Array, inverse: Array, bo
 
 
 @njit(**_opts)
-def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, step_y: Array, direction: Array,
-               box: Array, sphere: Array, cell_size: Array, lo: Array, hi: Array, level: Array, scale: Array,
-               rect: Array, address: Array, lines: int, shifts: Array, nodes: Array, weights: Array, channels: int,
-               reach: float, cut: float, longest: int, image: Array, column: Array,
-               statistics: Array) -> None:  # fmt: skip
+def march_tile(tile: Array, lattice: int, least: int, most: int, limit: Array, start: Array, step_x: Array,
+               step_y: Array, direction: Array, box: Array, sphere: Array, cell_size: Array, lo: Array, hi: Array,
+               level: Array, scale: Array, rect: Array, address: Array, lines: int, shifts: Array, nodes: Array,
+               weights: Array, channels: int, reach: float, cut: float, longest: int, image: Array, column: Array,
+               contrast: Array, statistics: Array) -> None:  # fmt: skip
     """March all rays of one tile.
 
     Parameters
@@ -129,8 +111,8 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     tile : int64, shape (4,)
         ``x0, x1, y0, y1``: the tile's pixels, half open; x0 and y0 are multiples of BLOCK, x1 and y1 too unless the
         image ends there.
-    rays_per_side : int32, shape (y, x)
-        Each pixel gets this number squared of sub-rays, on a square lattice.
+    lattice, least, most, limit
+        Where sub-rays go; see `subray_kernels.list_rays`.
     start, step_x, step_y : float64, shape (3,)
         Corner of pixel (0, 0) and the steps to the next pixel in x and y, in finest units.
     direction : float64, shape (3,)
@@ -158,6 +140,9 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
         Brightness above the background, mean over the pixel.
     column : float64, shape (y, x), out
         Mean mass column, g/cm2.
+    contrast : float64, shape (y, x), out
+        Half the difference between the means of two sets of the pixel's rays, of the brightness summed over channels;
+        without meaning for a pixel with a single ray.
     statistics : float64, shape (len(gather_kernels.STATISTICS),), out
         Added to.
     """
@@ -181,38 +166,43 @@ def march_tile(tile: Array, rays_per_side: Array, start: Array, step_x: Array, s
     piece_start, piece_stop = np.empty((LANES, 3, most_pieces)), np.empty((LANES, 3, most_pieces))
     piece_patch = np.empty((LANES, 3, most_pieces), dtype=np.int32)
     pieces, progress = np.empty(LANES, dtype=np.int64), np.empty((LANES, 2))
-    side = rays_per_side.max()
-    places, pixels = (
-        np.empty((PACKET_SIDE * PACKET_SIDE * side * side, 2)),
-        np.empty((PACKET_SIDE * PACKET_SIDE * side * side, 2), dtype=np.int64),
-    )
+    block, cursor = np.empty(4, dtype=np.int64), np.empty(4, dtype=np.int64)
+    squares = np.empty((3 * most + 4, SQUARE), dtype=np.int64)
+    places, pixels, shares = np.empty((LANES, 2)), np.empty((LANES, 2), dtype=np.int64), np.empty((LANES, 2))
     origins, columns = np.empty((LANES, 3)), np.empty(LANES)
     pixel_sums = np.zeros((PACKET_SIDE, PACKET_SIDE, channels))
     for y0 in range(tile[2], tile[3], PACKET_SIDE):
         for x0 in range(tile[0], tile[1], PACKET_SIDE):
             x1, y1 = min(x0 + PACKET_SIDE, tile[1]), min(y0 + PACKET_SIDE, tile[3])
             n_candidates = block_candidates(rect, x0, x1, y0, y1, candidates)
-            n_rays = list_rays(x0, x1, y0, y1, tile, rays_per_side, places, pixels)
-            statistics[RAYS] += n_rays
+            block[0], block[1], block[2], block[3] = x0, x1, y0, y1
+            cursor[:] = 0
             pixel_sums[:] = 0.0
-            for first in range(0, n_rays, LANES):
-                rays = min(LANES, n_rays - first)
+            while True:
+                rays = list_rays(block, lattice, least, most, limit, rect, level, candidates, n_candidates, cursor,
+                                 squares, places, pixels, shares)  # fmt: skip
+                if rays == 0:
+                    break
+                statistics[RAYS] += rays
                 for lane in range(rays):
                     for axis in range(3):
-                        origins[lane, axis] = (start[axis] + places[first + lane, 0] * step_x[axis]
-                                               + places[first + lane, 1] * step_y[axis])  # fmt: skip
+                        origins[lane, axis] = (start[axis] + places[lane, 0] * step_x[axis]
+                                               + places[lane, 1] * step_y[axis])  # fmt: skip
                 march_packet(rays, origins, direction, inverse, box, sphere, cell_size, lo, hi, level, scale, address,
                              candidates, n_candidates, lines, shifts, offsets_first, channels, reach, cut, piece_start,
                              piece_stop, piece_patch, pieces, progress, values, windows, far,
                              rows, row_windows, state, sums, folded, touched, columns, statistics)  # fmt: skip
                 for lane in range(rays):
-                    px, py = pixels[first + lane]
-                    share = 1.0 / rays_per_side[py, px] ** 2
-                    column[py, px] += share * columns[lane]
-                    into = pixel_sums[py + tile[2] - y0, px + tile[0] - x0]
+                    x, y = pixels[lane]
+                    into = pixel_sums[y - y0, x - x0]
+                    total = 0.0
                     for node in range(n_nodes):
                         for k in range(touched[2], touched[3]):
-                            into[k] += share * weights[node] * folded[(node * channels + k) * STEP + lane]
+                            part = weights[node] * folded[(node * channels + k) * STEP + lane]
+                            into[k] += shares[lane, 0] * part
+                            total += part
+                    column[y - tile[2], x - tile[0]] += shares[lane, 0] * columns[lane]
+                    contrast[y - tile[2], x - tile[0]] += shares[lane, 1] * total
                 clear_folded(touched[2], touched[3], channels, n_nodes, folded)
             for y in range(y0, y1):
                 for x in range(x0, x1):

@@ -133,51 +133,6 @@ def covering_size(
     return nx, ny
 
 
-def rays_per_pixel(
-    view: View,
-    rect: FloatArray,
-    level: npt.NDArray[np.int32],
-    cell: FloatArray,
-    tile: tuple[int, int, int, int],
-    most: int,
-) -> npt.NDArray[np.int32]:
-    """Sub-rays per side for each pixel of a tile, so that their spacing is at most the finest cell behind it.
-
-    Parameters
-    ----------
-    rect : ndarray, shape (n, 4)
-        Sky rectangles of the patches behind the tile (at least), in pixels.
-    level : ndarray, shape (n,)
-        Their levels.
-    cell : ndarray, shape (levels,)
-        Smallest cell side of each level, in the snapshot's length unit.
-    tile : tuple of 4 ints
-        x0, x1, y0, y1.
-    most : int
-        Cap on the result.
-
-    Returns
-    -------
-    ndarray, shape (y1 - y0, x1 - x0), int32
-    """
-    x0, x1, y0, y1 = tile
-    sides = np.minimum(np.ceil(view.pixel / cell - 1e-6), most).astype(np.int32).clip(1)
-    out = np.ones((y1 - y0, x1 - x0), dtype=np.int32)
-    for lev in np.unique(level):
-        side = sides[lev]
-        if side == 1:
-            continue
-        chosen = rect[level == lev]
-        left = np.clip(np.floor(chosen[:, 0] + 1e-6).astype(int) - x0, 0, x1 - x0)
-        right = np.clip(np.ceil(chosen[:, 1] - 1e-6).astype(int) - x0, 0, x1 - x0)
-        low = np.clip(np.floor(chosen[:, 2] + 1e-6).astype(int) - y0, 0, y1 - y0)
-        high = np.clip(np.ceil(chosen[:, 3] - 1e-6).astype(int) - y0, 0, y1 - y0)
-        for a, b, c, d in zip(left, right, low, high, strict=True):
-            block = out[c:d, a:b]
-            np.maximum(block, side, out=block)
-    return out
-
-
 def select_patches(rect: FloatArray, view: View) -> npt.NDArray[np.bool_]:
     """Which sky rectangles meet the image at all."""
     return (rect[:, 0] < view.nx) & (rect[:, 1] > 0) & (rect[:, 2] < view.ny) & (rect[:, 3] > 0)

@@ -23,7 +23,7 @@ def framework_total(path: Path) -> float:
     return float(re.search(r"integral of density = (\S+)", text).group(1))
 
 
-def rendered_total(path: Path, view: dict, rays: int) -> float:
+def rendered_total(path: Path, view: dict, rays: int | str) -> float:
     """Sum of the column over the image, in the same units (pc^3 of 1e-20 g/cm3)."""
     job = make_job(
         snapshot={"path": str(path), "units": TINY_UNITS},
@@ -46,6 +46,29 @@ def test_along_an_axis(tiny_snapshot: Path, toward: str):
 def test_at_a_slant(tiny_snapshot: Path, view: dict):
     found = rendered_total(tiny_snapshot, {**view, "pixel": "0.02 pc"}, 4)
     assert found == pytest.approx(framework_total(tiny_snapshot), rel=1e-4)
+
+
+@pytest.mark.parametrize("pixel", [0.02, 0.06, 0.3])
+@pytest.mark.parametrize("view", OBLIQUE[:2], ids=["oblique", "corner on"])
+def test_as_many_rays_as_cells_ask_for(tiny_snapshot: Path, view: dict, pixel: float):
+    # From a third of the coarsest cell to twenty times the finest.
+    found = rendered_total(tiny_snapshot, {**view, "pixel": f"{pixel} pc"}, "auto")
+    assert found == pytest.approx(framework_total(tiny_snapshot), rel=1e-4)
+
+
+def test_as_many_rays_as_cells_ask_for_nearly_along_an_axis(tiny_snapshot: Path):
+    # Rows of rays nearly along rows of cells: what each row misses at the cells' edges adds up.
+    found = rendered_total(tiny_snapshot, {**OBLIQUE[2], "pixel": "0.06 pc"}, "auto")
+    assert found == pytest.approx(framework_total(tiny_snapshot), rel=1e-3)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("pixel", [0.02, 0.06, 0.3])
+@pytest.mark.parametrize("view", OBLIQUE[:2], ids=["oblique", "corner on"])
+@pytest.mark.parametrize("data", ["small", "ratio4"])
+def test_as_many_rays_as_cells_of_larger_data_ask_for(real_data: Path, data: str, view: dict, pixel: float):
+    found = rendered_total(real_data / data, {**view, "pixel": f"{pixel} pc"}, "auto")
+    assert found == pytest.approx(framework_total(real_data / data), rel=1e-4)
 
 
 @pytest.mark.slow

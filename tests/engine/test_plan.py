@@ -183,6 +183,8 @@ CHANGES: dict[str, Any] = {
     "region.periodic": ["z"],
     "rays.per_side": "auto",
     "rays.most": 8,
+    "rays.spacing": 0.4,
+    "rays.error": True,
     "march.reconstruction": "linear",
     "march.limiter": "minmod",
     "output.brightness": "Jy/sr",
@@ -281,6 +283,7 @@ def test_what_does_not_change_the_pixels_does_not_count(fields: Snapshot, key: s
         ("channels.width", "100 m/s"),
         ("view.toward", [0, 0, -1]),
         ("rays.per_side", 1),
+        ("rays.most", 100),
     ],
 )
 def test_the_same_in_other_words(fields: Snapshot, key: str, value: Any):
