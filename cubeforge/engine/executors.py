@@ -180,8 +180,8 @@ def local_executor(workers: int, threads: int) -> Iterator[DaskExecutor]:
                     threads_per_worker=threads,
                     processes=True,
                     host="127.0.0.1",
-                    dashboard_address=None,
-                    worker_dashboard_address=None,
+                    dashboard_address="127.0.0.1:0",
+                    worker_dashboard_address="127.0.0.1:0",
                     silence_logs=SILENT,
                 )
                 closing.callback(_close, cluster)

@@ -171,7 +171,11 @@ def test_killed_worker_is_replaced(job: Path, start: Callable[..., Any], whole: 
     os.kill(workers[0], signal.SIGKILL)
     out, err = process.communicate(timeout=90)
     assert process.returncode == 0, err
-    assert err == ""
+    # Python tells of semaphores that a killed process could not give back; nothing else is said.
+    said = [
+        line for line in err.splitlines() if "resource_tracker" not in line and "warnings.warn(" not in line
+    ]
+    assert said == []
     assert out != ""
     tiles = booked(job.parent / "clump.zarr")
     # A batch whose records were durable before the worker could say so is rendered again.

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import socket
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -55,14 +57,14 @@ def test_serial_finds_something(serial: tuple[Outcome, Contents]):
     assert outcome.totals["rays"] > 64 * 64
 
 
-@pytest.mark.parametrize("times", [1.0, 1.5, 4.0])
+@pytest.mark.parametrize("times", [1.0, 2.0, 100.0])
 def test_serial_with_little_memory(tmp_path: Path, cloud: Path, serial: Any, times: float):
     job = make_job(snapshot={"path": str(cloud)})
     least = make_plan(build_setup(parse_job(job))).least_memory(1)
     outcome = run(tmp_path, cloud, workers=0, memory=int(least * times))
     check(outcome, serial)
     # Patches that did not stay in memory were read again.
-    assert (outcome.totals["read_bytes"] > serial[0].totals["read_bytes"]) == (times < 4.0)
+    assert (outcome.totals["read_bytes"] > serial[0].totals["read_bytes"]) == (times < 100.0)
 
 
 @pytest.mark.parametrize(
@@ -92,3 +94,11 @@ def test_finished_cube_is_left_alone(tmp_path: Path, cloud: Path, serial: Any):
     assert again.totals == first.totals
     assert {path: path.stat().st_mtime_ns for path in first.cube.rglob("c/0/*/*")} == chunks
     assert len(chunks) == 2 * 64
+
+
+def test_next_to_another_cluster(tmp_path: Path, cloud: Path, serial: Any):
+    # The port that dask prefers is taken; warnings are errors here.
+    with contextlib.ExitStack() as closing:
+        with contextlib.suppress(OSError):
+            closing.enter_context(socket.create_server(("127.0.0.1", 8787)))
+        check(run(tmp_path, cloud, workers=1), serial)
