@@ -63,6 +63,8 @@ def shock_job(co_file: str, toward, reconstruction: str, **view) -> dict:
         gas={"velocity": FLOW}, line={"molecule": co_file},
         view={"toward": list(toward), "pixel": "1 pc", **view},
         channels={"first": "-6 km/s", "last": "6 km/s", "width": "0.1 km/s"},
+        # Off the cells' middle lines, where slopes across the line of sight count.
+        rays={"per_side": 2},
         march={"reconstruction": reconstruction},
     )  # fmt: skip
 
@@ -99,7 +101,10 @@ def test_a_smeared_shock_stays_in_its_cell(co_file: str):
     linear, constant = both(shock_job(co_file, (0.0, 0.0, 1.0), "linear", north=[0.0, 1.0, 0.0], size=[17, 4]),
                             shock_tube(middle=True))  # fmt: skip
     others = np.arange(17) != 8
-    np.testing.assert_array_equal(linear[:, :, others], constant[:, :, others])
+    # To rounding only: rays of one packet go through the arithmetic that the steepest of them needs.
+    rounding = 2e-6 * constant.max()
+    np.testing.assert_allclose(linear[:, :, others], constant[:, :, others], rtol=0.0, atol=rounding)
+    assert np.abs(linear - constant)[:, :, 8].max() > 1e3 * rounding
 
 
 def test_the_cell_between_two_states_is_swept(co_file: str):
