@@ -27,7 +27,7 @@ LIBRARIES = {
     "matplotlib": lambda file: file.parent.name == "report",
     "click": lambda file: file.name == "cli.py",
     "rich": lambda file: file.name == "terminal.py",
-    "pydantic": lambda file: file.name == "job.py",
+    "pydantic": lambda file: file.parent.name == "job",
     "astropy": lambda file: file.name in ("quantities.py", "fits.py", "wcs.py"),
 }
 
