@@ -33,8 +33,9 @@ STATISTICS = ("rays", "crossings", "emission", "emission_outside", "emission_ste
 along which the velocity changes by more than a line width b."""
 
 WIDEST = 0.35
-"""Largest half span of velocity, in widths b, of a crossing that is done in one piece: the line's shape is then right
-to 1e-5 (`channel_kernels.skew`). Others are cut."""
+"""Largest half span of velocity, in widths b, of a crossing that is done in one piece. The line's shape
+(`channel_kernels.skew`) is then right to 1e-5 of the peak for line-centre depths up to 30, and to 1.2e-4 at 1e4, where
+only the far wings are seen. Other crossings are cut."""
 MOST_CUTS = 1024
 """Most pieces of one crossing."""
 EMPTY = 2**30

@@ -36,7 +36,7 @@ def painted(hierarchy: Hierarchy) -> tuple[np.ndarray, np.ndarray]:
     for number in range(hierarchy.patches):
         per = np.array(finest // hierarchy.domain[hierarchy.level[number]])
         lo, shape = hierarchy.lo[number].astype(int), hierarchy.shape[number].astype(int)
-        cells = np.arange(shape.prod()).reshape(shape)
+        cells = np.arange(shape.prod()).reshape(shape, order="F")
         for axis in range(3):
             cells = cells.repeat(per[axis], axis=axis)
         where = tuple(slice(a, b) for a, b in zip(lo * per, (lo + shape) * per, strict=True))
