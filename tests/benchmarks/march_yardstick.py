@@ -22,6 +22,7 @@ from cubeforge.transfer.march_kernels import march_tile
 from cubeforge.transfer.optical import LineCells, pack_cells
 from cubeforge.transfer.pointers import addresses
 from cubeforge.transfer.scene import Region, Scene, build_scene
+from cubeforge.transfer.subrays import fixed_sampling
 from cubeforge.transfer.view import View, covering_size, sky_basis
 
 SIDE = 128
@@ -94,25 +95,28 @@ def make_view(mesh: Hierarchy, toward: list[float]) -> tuple[View, Scene]:
 def run_numba(view: View, scene: Scene, band: Band, patches: list[Any]) -> tuple[float, int, Any]:
     """Seconds, crossings, image."""
     image = np.zeros((band.count, view.ny, view.nx), dtype=np.float32)
-    column, statistics = np.zeros((view.ny, view.nx)), np.zeros(len(STATISTICS))
-    side = np.ones((view.ny, view.nx), dtype=np.int32)
+    column, contrast = np.zeros((2, view.ny, view.nx))
+    statistics = np.zeros(len(STATISTICS))
+    rays = fixed_sampling(1, np.ones(len(scene.scale)), False)
     address = addresses([patches[p] for p in scene.patch])
     began = time.perf_counter()
     march_tile(
-        np.array([0, view.nx, 0, view.ny]), side, scene.start, scene.step_x, scene.step_y, scene.direction,
-        scene.box, scene.sphere, scene.cell, scene.lo, scene.hi, scene.level, scene.scale, scene.rect, address, 1,
-        np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut, scene.longest, image, column,
-        statistics,
+        np.array([0, view.nx, 0, view.ny]), rays.lattice, rays.least, rays.most, rays.limit, scene.start, scene.step_x,
+        scene.step_y, scene.direction, scene.box, scene.sphere, scene.cell, scene.lo, scene.hi, scene.level,
+        scene.scale, scene.rect, address, 1, np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut,
+        scene.longest, image, column, contrast, statistics,
     )  # fmt: skip
     return time.perf_counter() - began, int(statistics[CROSSINGS]), image
 
 
-def run_c(function: Any, view: View, scene: Scene, band: Band, patches: list[Any]) -> tuple[float, int, Any]:
+def run_c(
+    function: Any, side: int, view: View, scene: Scene, band: Band, patches: list[Any]
+) -> tuple[float, int, Any]:
     """Seconds, crossings, image."""
     pointers = (ctypes.c_void_p * len(patches))(*[p.ctypes.data for p in patches])
     triple = ctypes.c_double * 3
     given = CScene(
-        SIDE, PATCH, band.count, ctypes.cast(pointers, ctypes.POINTER(ctypes.c_void_p)), triple(*scene.direction),
+        side, PATCH, band.count, ctypes.cast(pointers, ctypes.POINTER(ctypes.c_void_p)), triple(*scene.direction),
         triple(*scene.start), triple(*scene.step_x), triple(*scene.step_y), band.cut, view.nx, view.ny,
     )  # fmt: skip
     image = np.zeros((band.count, view.ny, view.nx), dtype=np.float32)
@@ -143,7 +147,7 @@ def main() -> None:
                         runs["numba"].append(seconds)
                         for form in ("rays", "packets"):
                             seconds, _, other = run_c(
-                                getattr(reference, f"march_{form}"), view, scene, band, patches
+                                getattr(reference, f"march_{form}"), SIDE, view, scene, band, patches
                             )
                             runs[form].append(seconds)
                     best = {form: 1e9 * min(times) / crossings for form, times in runs.items()}
