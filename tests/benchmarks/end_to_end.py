@@ -157,7 +157,7 @@ def main() -> None:
             found = np.asarray(cubeforge.open_cube(outcome.cube).intensity[:])
             apart = np.abs(found - wanted).max() / wanted.max()
             parts = where_time_goes(setup)
-            print(f"{label}: finest grid {tuple(mesh.domain[-1])}, {parts['cells']:.3g} cells, "
+            print(f"{label}: finest grid {mesh.domain[-1].tolist()}, {parts['cells']:.3g} cells, "
                   f"{parts['crossings']:.3g} crossings, {CHANNELS} channels")  # fmt: skip
             print(f"  render {seconds:.2f} core s; numpy {slow:.2f} core s ({elapsed:.1f} s); "
                   f"ratio {slow / seconds:.0f}; cubes differ by {apart:.1e} of the peak")  # fmt: skip
