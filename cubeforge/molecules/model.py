@@ -125,7 +125,7 @@ class CollisionPartner:
 
 @dataclass(frozen=True, eq=False)
 class Molecule:
-    """A molecule, atom or ion; arrays are read-only.
+    """A molecule, an atom, an ion; arrays are read-only.
 
     Attributes
     ----------

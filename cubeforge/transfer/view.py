@@ -113,7 +113,7 @@ def footprints(view: View, lo: FloatArray, hi: FloatArray) -> tuple[FloatArray, 
     depth : ndarray, shape (n, 2)
         Nearest and farthest depth from the view's centre.
     """
-    x, y, t = view.project(0.5 * (lo + hi))
+    x, y, depth = view.project(0.5 * (lo + hi))
     half = 0.5 * (hi - lo)
     dx = half @ np.abs(view.right) / view.pixel
     dy = half @ np.abs(view.up) / view.pixel
@@ -121,7 +121,7 @@ def footprints(view: View, lo: FloatArray, hi: FloatArray) -> tuple[FloatArray, 
     guard_x = 1e-9 * (dx + np.abs(x))
     guard_y = 1e-9 * (dy + np.abs(y))
     rect = np.stack([x - dx - guard_x, x + dx + guard_x, y - dy - guard_y, y + dy + guard_y], axis=-1)
-    return rect, np.stack([t - dt, t + dt], axis=-1)
+    return rect, np.stack([depth - dt, depth + dt], axis=-1)
 
 
 def covering_size(

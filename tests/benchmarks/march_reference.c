@@ -69,9 +69,9 @@ static inline float escape_moderate(float t)
 
 static inline float escape_any(float t)
 {
-    float y = -t * LOG2E, rest;
-    y = y > -126.0f ? y : -126.0f;
-    float scale = two_to(y, &rest);
+    float power = -t * LOG2E, rest;
+    power = power > -126.0f ? power : -126.0f;
+    float scale = two_to(power, &rest);
     float e = (1.0f - scale) - scale * rest;
     return t > 0.0f ? e / t : 1.0f;
 }
