@@ -117,6 +117,24 @@ def sweep_beside(path: Path) -> None:
                 left.unlink(missing_ok=True)
 
 
+@contextlib.contextmanager
+def replacing(path: Path) -> Iterator[int]:
+    """Descriptor of a file that takes the name `path`, durably, when the block ends without an error."""
+    temporary = beside(path)
+    file = os.open(temporary, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
+    try:
+        try:
+            yield file
+            os.fsync(file)
+        finally:
+            os.close(file)
+        os.replace(temporary, path)
+    except BaseException:
+        temporary.unlink(missing_ok=True)
+        raise
+    fsync_folder(path.parent)
+
+
 class Staging:
     """The folder in which one run writes files before they get their names.
 

@@ -5,7 +5,6 @@ The file is made at its full size beside its final name, filled by positioned wr
 
 from __future__ import annotations
 
-import contextlib
 import math
 import os
 from collections.abc import Callable, Iterator
@@ -19,7 +18,7 @@ import numpy.typing as npt
 from astropy.io import fits
 
 from cubeforge.cube import checksums
-from cubeforge.cube.durable import beside, disk_errors, fsync_folder, make_folders, sweep_beside, write_all
+from cubeforge.cube.durable import disk_errors, make_folders, replacing, sweep_beside, write_all
 from cubeforge.cube.ledger import LedgerState, read_ledger
 from cubeforge.cube.tiles import INTENSITY, MAPS, Cube, tile_checksum
 from cubeforge.cube.wcs import header, map_header
@@ -179,7 +178,7 @@ def _export(
     with disk_errors(path, size):
         make_folders(path.parent)
         sweep_beside(path)
-        with _replacing(path) as file, ThreadPoolExecutor(THREADS) as threads:
+        with replacing(path) as file, ThreadPoolExecutor(THREADS) as threads:
             work = _Work(cube, done, limit, counter, threads)
             os.ftruncate(file, size)
             offset = 0
@@ -197,24 +196,6 @@ def _count(progress: Progress | None, total: int) -> Callable[[], None]:
             progress(written, total)
 
     return step
-
-
-@contextlib.contextmanager
-def _replacing(path: Path) -> Iterator[int]:
-    """Descriptor of a file that takes the name `path`, durably, when the block ends without an error."""
-    temporary = beside(path)
-    file = os.open(temporary, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
-    try:
-        try:
-            yield file
-            os.fsync(file)
-        finally:
-            os.close(file)
-        os.replace(temporary, path)
-    except BaseException:
-        temporary.unlink(missing_ok=True)
-        raise
-    fsync_folder(path.parent)
 
 
 def _whole_header(image: _Image, index: int, count: int) -> Any:

@@ -17,7 +17,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
 from cubeforge._version import VERSION
-from cubeforge.cube.durable import beside, disk_errors, fsync_folder, make_folders, sweep_beside, write_all
+from cubeforge.cube.durable import disk_errors, make_folders, replacing, sweep_beside, write_all
 from cubeforge.cube.store import open_cube
 from cubeforge.cube.tiles import Cube
 from cubeforge.errors import CubeError
@@ -108,19 +108,8 @@ def _write(path: Path, figure: Figure) -> None:
     with disk_errors(path, len(data)):
         make_folders(path.parent)
         sweep_beside(path)
-        temporary = beside(path)
-        file = os.open(temporary, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
-        try:
-            try:
-                write_all(file, data)
-                os.fsync(file)
-            finally:
-                os.close(file)
-            os.replace(temporary, path)
-        except BaseException:
-            temporary.unlink(missing_ok=True)
-            raise
-        fsync_folder(path.parent)
+        with replacing(path) as file:
+            write_all(file, data)
 
 
 @dataclass(frozen=True)
