@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import logging
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -76,6 +76,22 @@ class SerialExecutor:
             forget(str(path))
 
 
+def _remote_task() -> Callable[[str, list[int]], BatchResult]:
+    """`run_batch` as a task that says so when a worker lacks the package.
+
+    A nested function travels by value. One that travels by its name takes the worker's connection down where the name
+    is unknown, and the scheduler tries again for ever.
+    """
+
+    def task(path: str, tiles: list[int]) -> BatchResult:
+        from importlib import import_module
+
+        result: BatchResult = import_module("cubeforge.engine.shared").run_batch(path, tiles)
+        return result
+
+    return task
+
+
 class DaskExecutor:
     """Workers of a dask scheduler; futures in a bounded window, so that a million tiles need no million futures."""
 
@@ -111,6 +127,7 @@ class DaskExecutor:
         from distributed import as_completed  # costs 0.4 s at start-up
 
         slots = sum(each["nthreads"] for each in self._workers().values())
+        task = _remote_task()
         flow = as_completed()
         under_way = 0
 
@@ -118,7 +135,7 @@ class DaskExecutor:
             tiles = batches.take(slots)
             if not tiles:
                 return 0
-            flow.add(self._client.submit(run_batch, str(path), tiles, pure=False))
+            flow.add(self._client.submit(task, str(path), tiles, pure=False))
             return 1
 
         for _ in range(WINDOW * slots):
@@ -130,7 +147,7 @@ class DaskExecutor:
                 under_way += feed() - 1
                 yield records
             # The workers of a given scheduler live on, and should not keep a cube's patches in memory.
-            self._client.run(forget, str(path))
+            self._client.run(forget, str(path), on_error="ignore")
         finally:
             # Whatever is still queued when the render stops is of no use to anyone.
             with contextlib.suppress(Exception):
@@ -147,6 +164,10 @@ class DaskExecutor:
                 f"{error.allowed_failures + 1} workers died, one after the other, over the same batch of tiles: out "
                 "of memory, most likely; give them more of it, or less to do at once (--threads, --memory), and run "
                 "again: it goes on where it stopped"
+            ) from error
+        except ImportError as error:
+            raise EngineError(
+                f"a worker cannot load cubeforge ({error}); install the same version wherever workers run"
             ) from error
         except (CancelledError, OSError) as error:
             raise EngineError(

@@ -7,6 +7,7 @@ import sys
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import pytest
 from support.renders import demo_cloud, wait_for
@@ -32,22 +33,27 @@ def scheduler(tmp_path: Path) -> Iterator[Callable[..., Scheduler]]:
     """Starts a scheduler with workers on the loopback address; all are stopped at the end."""
     running: list[subprocess.Popen[bytes]] = []
 
-    def run(*words: str) -> subprocess.Popen[bytes]:
+    def run(*words: str, **options: Any) -> subprocess.Popen[bytes]:
         log = (tmp_path / f"dask-{len(running)}.log").open("wb")
         with log:
             process = subprocess.Popen(
-                [sys.executable, "-m", *words], stdout=log, stderr=log, cwd=tmp_path, start_new_session=True
+                [sys.executable, "-m", *words],
+                stdout=log,
+                stderr=log,
+                cwd=tmp_path,
+                start_new_session=True,
+                **options,
             )
         running.append(process)
         return process
 
-    def start(workers: int, threads: int) -> Scheduler:
+    def start(workers: int, threads: int, **options: Any) -> Scheduler:
         file = tmp_path / "scheduler.json"
         place = ("--host", "127.0.0.1", "--dashboard-address", "127.0.0.1:0", "--scheduler-file", str(file))
-        leader = run("distributed.cli.dask_scheduler", "--port", "0", *place)
+        leader = run("distributed.cli.dask_scheduler", "--port", "0", *place, **options)
         wait_for(file.is_file, 30)
-        options = ("--nthreads", str(threads), "--local-directory", str(tmp_path), "--death-timeout", "30")
-        followers = [run("distributed.cli.dask_worker", *place, *options) for _ in range(workers)]
+        words = ("--nthreads", str(threads), "--local-directory", str(tmp_path), "--death-timeout", "30")
+        followers = [run("distributed.cli.dask_worker", *place, *words, **options) for _ in range(workers)]
         return Scheduler(file, leader, followers)
 
     yield start

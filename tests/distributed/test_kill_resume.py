@@ -240,6 +240,19 @@ def test_scheduler_that_is_not_there(job: Path, tmp_path: Path):
     assert message.startswith(f"{tmp_path}/none.json: there is no such scheduler file")
 
 
+def test_workers_without_the_package(
+    job: Path, tmp_path: Path, scheduler: Callable[..., Any], whole: Contents
+):
+    # As on a node where nobody installed it: not even its name is known to the scheduler and its workers.
+    (tmp_path / "hidden" / "cubeforge").mkdir(parents=True)
+    (tmp_path / "hidden" / "cubeforge" / "__init__.py").write_text("raise ImportError('not on this node')\n")
+    environment = os.environ | {"PYTHONPATH": str(tmp_path / "hidden")}
+    started = scheduler(workers=1, threads=1, env=environment)
+    message = one_line(cli("render", job, "--scheduler-file", started.file, "--no-picture", "--quiet"), 3)
+    assert message.startswith("a worker cannot load cubeforge (not on this node)")
+    finish(job, whole)
+
+
 @pytest.fixture
 def small_disk(tmp_path: Path) -> Iterator[Path]:
     """A file system of 6 MiB; only root can mount it."""
