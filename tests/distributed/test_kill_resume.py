@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import psutil
 import pytest
 from support.renders import (
     Contents,
@@ -356,7 +357,15 @@ def test_snapshot_is_damaged_meanwhile(
 def test_second_render_of_the_same_cube(job: Path, start: Callable[..., Any], whole: Contents):
     process = start("--workers", str(SLOTS))
     wait_for(some_tiles_booked(job), 60)
-    message = one_line(cli("render", job, "--workers", "0", "--no-picture", "--quiet"))
+    # The workers stand still meanwhile, or a fast machine would be done before the second render looks.
+    workers = psutil.Process(process.pid).children(recursive=True)
+    for worker in workers:
+        worker.suspend()
+    try:
+        message = one_line(cli("render", job, "--workers", "0", "--no-picture", "--quiet"))
+    finally:
+        for worker in workers:
+            worker.resume()
     assert f"process {process.pid}" in message
     assert "is writing to this cube" in message
     _, err = process.communicate(timeout=90)
