@@ -63,8 +63,10 @@ class PatchCache:
         return loaded
 
     def _keep(self, patch: int, loaded: Patch) -> None:
-        self._kept[patch] = loaded
-        self.size += loaded.nbytes
-        while self.size > self._limit and self._kept:
+        """Make room first: not even for a moment is there more than the limit."""
+        while self.size + loaded.nbytes > self._limit and self._kept:
             _, old = self._kept.popitem(last=False)
             self.size -= old.nbytes
+        if loaded.nbytes <= self._limit:
+            self._kept[patch] = loaded
+            self.size += loaded.nbytes

@@ -31,6 +31,7 @@ from cubeforge.engine.shared import Shared, sweep_shared
 from cubeforge.engine.systemic import systemic_velocity
 from cubeforge.errors import CubeforgeError
 from cubeforge.job import Job, load_job
+from cubeforge.mesh.leaves import check_disjoint
 
 
 @dataclass(frozen=True)
@@ -153,6 +154,7 @@ def render(
     if memory is not None:
         plan.share(memory, threads if workers else 1)
     setup.snapshot.check_files()
+    check_disjoint(setup.hierarchy)
     path = begin(job.cube_path, plan)
     with Lease(path) as lease:
         cube = open_cube(path, run=lease.run)
