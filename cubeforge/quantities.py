@@ -114,11 +114,6 @@ def parse(value: Any, kind: str, *, where: str) -> float:
         raise JobError(f"{where}: {error}") from None
 
 
-def show(value: float, kind: str, unit: str, digits: int = 4) -> str:
-    """Write an internal float in `unit`: ``show(1e5, "velocity", "km/s") == "1 km/s"``."""
-    return f"{(value * KINDS[kind]).to_value(u.Unit(unit)):.{digits}g} {unit}"
-
-
 def show_bytes(count: float) -> str:
     """Write a number of bytes with a binary prefix: ``show_bytes(2**31) == "2.0 GiB"``."""
     size = float(count)

@@ -128,7 +128,7 @@ class TileWorker:
             np.array(area, dtype=np.int64), rays.lattice, rays.least, rays.most, rays.limit, scene.start,
             scene.step_x, scene.step_y, scene.direction, scene.box, scene.sphere, scene.cell, scene.lo[entries],
             scene.hi[entries], scene.level[entries], scene.scale, scene.rect[entries], addresses(patches), 1,
-            np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut, scene.longest, image, column,
+            np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut, image, column,
             contrast, statistics,
         )  # fmt: skip
         return image, column, contrast

@@ -58,11 +58,6 @@ class Band:
         """Channel centres, cm/s, shape (count,)."""
         return np.asarray(self.first + self.width * np.arange(self.count), dtype=np.float64)
 
-    def sampled(self) -> npt.NDArray[np.float32]:
-        """All sampled velocities in channels from the middle of the band, shape (nodes, count)."""
-        grid = np.arange(self.count) - 0.5 * (self.count - 1)
-        return (grid[None, :] + self.nodes[:, None]).astype(np.float32)
-
 
 def node_count(narrowest: float) -> int:
     """Gauss-Legendre nodes a channel for lines of width b >= `narrowest` channels.

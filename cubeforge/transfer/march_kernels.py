@@ -102,7 +102,7 @@ def march_packet(rays: int, origins: Array, direction: Array, inverse: Array, bo
 def march_tile(tile: Array, lattice: int, least: int, most: int, limit: Array, start: Array, step_x: Array,
                step_y: Array, direction: Array, box: Array, sphere: Array, cell_size: Array, lo: Array, hi: Array,
                level: Array, scale: Array, rect: Array, address: Array, lines: int, shifts: Array, nodes: Array,
-               weights: Array, channels: int, reach: float, cut: float, longest: int, image: Array, column: Array,
+               weights: Array, channels: int, reach: float, cut: float, image: Array, column: Array,
                contrast: Array, statistics: Array) -> None:  # fmt: skip
     """March all rays of one tile.
 
@@ -134,8 +134,6 @@ def march_tile(tile: Array, lattice: int, least: int, most: int, limit: Array, s
         Largest distance of a node from its channel's centre.
     cut : float
         Half width of a window in line widths, for an optical depth up to 1.
-    longest : int
-        Bound on the crossings of one ray in one patch.
     image : float32, shape (channels, y, x), out
         Brightness above the background, mean over the pixel.
     column : float64, shape (y, x), out

@@ -12,7 +12,6 @@ import numpy as np
 import numpy.typing as npt
 
 from cubeforge.errors import PlanError
-from cubeforge.mesh.hierarchy import Hierarchy
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -136,12 +135,3 @@ def covering_size(
 def select_patches(rect: FloatArray, view: View) -> npt.NDArray[np.bool_]:
     """Which sky rectangles meet the image at all."""
     return (rect[:, 0] < view.nx) & (rect[:, 1] > 0) & (rect[:, 2] < view.ny) & (rect[:, 3] > 0)
-
-
-def patch_corners(hierarchy: Hierarchy) -> tuple[FloatArray, FloatArray]:
-    """Low and high corners of all patches in the snapshot's length unit, each (patches, 3)."""
-    lo, hi = hierarchy.edges()
-    return (
-        hierarchy.origin + lo * hierarchy.finest_cell,
-        hierarchy.origin + hi * hierarchy.finest_cell,
-    )

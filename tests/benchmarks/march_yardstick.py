@@ -104,7 +104,7 @@ def run_numba(view: View, scene: Scene, band: Band, patches: list[Any]) -> tuple
         np.array([0, view.nx, 0, view.ny]), rays.lattice, rays.least, rays.most, rays.limit, scene.start, scene.step_x,
         scene.step_y, scene.direction, scene.box, scene.sphere, scene.cell, scene.lo, scene.hi, scene.level,
         scene.scale, scene.rect, address, 1, np.zeros(1), band.nodes, band.weights, band.count, band.reach, band.cut,
-        scene.longest, image, column, contrast, statistics,
+        image, column, contrast, statistics,
     )  # fmt: skip
     return time.perf_counter() - began, int(statistics[CROSSINGS]), image
 
